@@ -1,0 +1,1 @@
+"""Models of the circulation and recordings with known truth."""

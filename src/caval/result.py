@@ -1,0 +1,229 @@
+"""What the pipeline found in a record: tables, track, figure, and the files of the contract."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import shutil
+import tempfile
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+
+import caval
+from caval import registry, tables
+from caval.errors import FileError, InputError
+from caval.recording import Recording
+from caval.track import Track
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+    from caval.pipeline import Pipeline
+
+__all__ = ["Result"]
+
+
+@dataclass(frozen=True, eq=False)
+class Result:
+    """Tables by the contract of columns.
+
+    Attributes
+    ----------
+    recording : Recording
+    roles : mapping of str to str
+        Channel label of each role.
+    beats, marks, spans : DataFrame
+        A row per beat, mark and span, in time order; seconds of the record, mmHg; NaN where a wave is absent.
+    others : mapping of str to DataFrame
+        Further tables that stages gave (``breaths``, ``trend``).
+    run : mapping
+        Version, stages, settings, roles, counts: what STEM_run.json holds, without the input's hash.
+    warnings : tuple of str
+        Plain statements of what could not be done, and why.
+    """
+
+    recording: Recording
+    roles: Mapping[str, str]
+    beats: pd.DataFrame
+    marks: pd.DataFrame
+    spans: pd.DataFrame
+    others: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+    run: Mapping[str, Any] = field(default_factory=dict)
+    warnings: tuple[str, ...] = ()
+
+    @classmethod
+    def build(
+        cls,
+        recording: Recording,
+        roles: Mapping[str, str],
+        done: Mapping[str, pd.DataFrame],
+        *,
+        pipeline: Pipeline,
+        stretch: tuple[float, float | None],
+        units: Mapping[str, str],
+    ) -> Result:
+        """The result of a pipeline's tables."""
+        table = {name: done.get(name, tables.empty(name)) for name in ("beats", "marks", "spans", "readings")}
+        renumber = dict(zip(table["beats"]["beat"], range(len(table["beats"])), strict=True))
+        for name in ("beats", "marks", "readings"):
+            kept = table[name][table[name]["beat"].isin(renumber)]
+            table[name] = kept.assign(beat=kept["beat"].map(renumber).astype("int64")).reset_index(drop=True)
+        beats = tables.beat_table(table["beats"], table["marks"], table["readings"])
+        warnings = _statements(recording, roles, beats, table["marks"], table["spans"])
+        run = {
+            "program": "caval",
+            "version": caval.__version__,
+            "record": recording.name,
+            "roles": dict(roles),
+            "units": dict(units),
+            "start_s": stretch[0],
+            "stop_s": stretch[1],
+            "stages": [pipeline.choose.get(s, s) for s in pipeline.stages],
+            "detectors": list(pipeline.detectors),
+            "settings": {k: dict(v) for k, v in pipeline.settings.items()},
+            "delay_s": None,
+            "counts": {
+                "beats": len(beats),
+                "usable_beats": int(beats["usable"].sum()),
+                "marks": {str(k): int(v) for k, v in table["marks"]["mark"].value_counts().sort_index().items()},
+                "spans": {str(k): int(v) for k, v in table["spans"]["kind"].value_counts().sort_index().items()},
+            },
+            "warnings": list(warnings),
+            "notice": "Research software, not a medical device.",
+        }
+        others = {k: v for k, v in done.items() if k not in (*table, "candidates")}
+        return cls(recording, dict(roles), beats, table["marks"], table["spans"], others, run, warnings)
+
+    @property
+    def track(self) -> Track:
+        """Our marks and spans as an annotation track."""
+        channels = {label: i for i, label in reversed(list(enumerate(self.recording.labels)))}
+        return Track.from_tables(self.marks, self.spans, channels=channels, roles=self.roles)
+
+    def plot(self) -> Figure:
+        """The figure of the record: a strip with marks, the median beat, the trend."""
+        from caval.report.figure import figure
+
+        return figure(self)
+
+    def write(
+        self,
+        directory: str | Path,
+        *,
+        stem: str | None = None,
+        table: str = "parquet",
+        track: Sequence[str] | None = None,
+        force: bool = False,
+        figure: bool = True,
+    ) -> list[Path]:
+        """Write the files of the contract into `directory`; all of them or none.
+
+        Parameters
+        ----------
+        table : {"parquet", "csv"}
+        track : sequence of str, optional
+            Formats of the annotation track; the record's own format by default.
+        force : bool
+            Overwrite files that are there.
+
+        Raises
+        ------
+        FileError
+            A file is in the way or cannot be written.
+        InputError
+            An unknown kind of table.
+        """
+        if table not in ("parquet", "csv"):
+            raise InputError(f"table {table!r}; allowed: parquet, csv")
+        stem = stem or self.recording.name
+        directory = Path(directory)
+        kinds = list(track) if track else [self.recording.format or "csv"]
+        writers = [registry.pick(registry.formats(), kind, "track format") for kind in kinds]
+        for kind, writer in zip(kinds, writers, strict=True):
+            if writer.write_marked is None:
+                able = ", ".join(k for k, f in registry.formats().items() if f.value.write_marked is not None)
+                raise InputError(f"format {kind!r} holds no annotation track; allowed: {able}")
+        try:
+            directory.mkdir(parents=True, exist_ok=True)
+            scratch = Path(tempfile.mkdtemp(prefix=".caval-", dir=directory))
+        except OSError as error:
+            raise FileError(f"cannot write into {directory}: {error.strerror or error}") from error
+        try:
+            for name, rows in {"beats": self.beats, "marks": self.marks, "spans": self.spans, **self.others}.items():
+                _write_table(rows, scratch / f"{stem}_{name}.{table}")
+            for writer in writers:
+                writer.write_marked(self.recording, self.track, scratch, stem)
+            if figure:
+                self._save_figure(scratch / f"{stem}.png")
+            _write_json({**self.run, "input": _fingerprints(self.recording)}, scratch / f"{stem}_run.json")
+            return _move_all(scratch, directory, force=force, keep=self.recording.path)
+        except OSError as error:
+            if isinstance(error, FileError):
+                raise
+            raise FileError(f"cannot write into {directory}: {error.strerror or error}") from error
+        finally:
+            shutil.rmtree(scratch, ignore_errors=True)
+
+    def _save_figure(self, path: Path) -> None:
+        drawn = self.plot()
+        drawn.savefig(path)
+
+
+def _statements(
+    recording: Recording, roles: Mapping[str, str], beats: pd.DataFrame, marks: pd.DataFrame, spans: pd.DataFrame
+) -> tuple[str, ...]:
+    """What a reader must know that the tables do not shout."""
+    said = list(recording.notes)
+    if "ecg" not in roles:
+        beside = "the arterial trace" if "abp" in roles else "no other trace"
+        said.append(f"no ECG channel; beats rest on {beside}")
+    if not len(beats):
+        said.append("no beats found, so no marks")
+    elif not len(marks):
+        cvp = spans[spans["channel"] == roles["cvp"]]
+        worst = cvp.groupby("kind")["duration_s"].sum().sort_values(ascending=False)
+        why = f"{roles['cvp']!r} is {worst.index[0]} for {worst.iloc[0]:.0f} s" if len(worst) else "no wave stands out of the noise"
+        detail = cvp.loc[cvp["kind"] == worst.index[0], "detail"].iloc[0] if len(worst) else ""
+        said.append(f"no marks: {why}{f' ({detail})' if detail else ''}")
+    return tuple(said)
+
+
+def _write_table(rows: pd.DataFrame, path: Path) -> None:
+    if path.suffix == ".csv":
+        rows.to_csv(path, index=False)
+    else:
+        rows.to_parquet(path, index=False)
+
+
+def _write_json(content: Mapping[str, Any], path: Path) -> None:
+    path.write_text(json.dumps(content, indent=2, ensure_ascii=False, default=str) + "\n", encoding="utf-8")
+
+
+def _fingerprints(recording: Recording) -> dict[str, Any]:
+    """Name and SHA-256 of the input file; a record made in memory has none."""
+    if recording.path is None or not recording.path.is_file():
+        return {"name": recording.name, "sha256": None}
+    digest = hashlib.sha256()
+    with open(recording.path, "rb") as stream:
+        while part := stream.read(1 << 20):
+            digest.update(part)
+    return {"name": recording.path.name, "sha256": digest.hexdigest()}
+
+
+def _move_all(scratch: Path, directory: Path, *, force: bool, keep: Path | None) -> list[Path]:
+    """Move finished files to their places; nothing moves when one of them is in the way."""
+    made = sorted(p for p in scratch.iterdir())
+    targets = [directory / p.name for p in made]
+    for target in targets:
+        if keep is not None and target.exists() and target.samefile(keep):
+            raise FileError(f"{target} is the input, which is never overwritten; choose another --out")
+        if target.exists() and not force:
+            raise FileError(f"{target} exists; use --force to overwrite, or another --out")
+    for source, target in zip(made, targets, strict=True):
+        os.replace(source, target)
+    return targets

@@ -1,0 +1,1 @@
+"""Venous-pressure stages: one public function a file, named like the file."""
