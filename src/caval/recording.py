@@ -99,8 +99,8 @@ class Signal:
         return (np.asarray(time_s, dtype=np.float64) - self.start_s) * self.sampling_rate
 
     def at(self, time_s: ArrayLike) -> NDArray[np.float64]:
-        """Values at times in seconds, by straight lines between samples; NaN outside the stretch or beside a missing sample."""
-        place = self.position(time_s)
+        """Values at times in seconds, by straight lines between samples; NaN for NaN, outside the stretch, and beside a missing sample."""
+        place = np.nan_to_num(self.position(time_s), nan=-1.0)
         if not len(self.values):
             return np.full(np.shape(place), np.nan)
         inside = (place >= -1e-6) & (place <= len(self.values) - 1 + 1e-6)

@@ -13,7 +13,7 @@ from caval.vocabulary import WAVES
 __all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "empty", "join_blocks", "overlaps", "time_column"]
 
 SCHEMAS: dict[str, dict[str, str]] = {
-    "candidates": {"time_s": "f8", "detector": "object", "strength": "f8"},
+    "candidates": {"time_s": "f8", "detector": "object"},
     "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8"},
     "marks": {"time_s": "f8", "mark": "object", "beat": "i8", "pressure_mmhg": "f8", "confidence": "f8", "state": "object"},
     "spans": {"onset_s": "f8", "duration_s": "f8", "kind": "object", "channel": "object", "detail": "object"},

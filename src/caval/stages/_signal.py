@@ -1,0 +1,73 @@
+"""Small signal tools that several stages share. All keep the length and are zero-phase; none changes its input."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import ndimage, signal
+
+__all__ = ["bandpass", "cut", "fill", "grid", "lowpass", "moving_mean", "refine", "runs"]
+
+Floats = NDArray[np.float64]
+
+
+def fill(values: Floats) -> tuple[Floats, NDArray[np.bool_]]:
+    """Straight lines across missing samples, and where they were; all zeros when nothing is there."""
+    missing = ~np.isfinite(values)
+    if not missing.any():
+        return values, missing
+    if missing.all():
+        return np.zeros_like(values), missing
+    index = np.arange(len(values))
+    return np.interp(index, index[~missing], values[~missing]), missing
+
+
+def lowpass(values: Floats, sampling_rate: float, cut_hz: float) -> Floats:
+    """Zero-phase Butterworth low-pass, fourth order in all; a copy when the rate is too low for the cut."""
+    if cut_hz >= 0.45 * sampling_rate or len(values) < 16:
+        return values.copy()
+    return signal.sosfiltfilt(signal.butter(2, cut_hz, fs=sampling_rate, output="sos"), values)
+
+
+def bandpass(values: Floats, sampling_rate: float, low_hz: float, high_hz: float) -> Floats:
+    """Zero-phase Butterworth band-pass, fourth order in all."""
+    if len(values) < 32:
+        return np.zeros_like(values)
+    high_hz = min(high_hz, 0.45 * sampling_rate)
+    return signal.sosfiltfilt(signal.butter(2, [low_hz, high_hz], "bandpass", fs=sampling_rate, output="sos"), values)
+
+
+def moving_mean(values: Floats, width: int) -> Floats:
+    """Centred mean over `width` samples (made odd), ends repeated."""
+    return ndimage.uniform_filter1d(values, max(1, width | 1), mode="nearest")
+
+
+def cut(values: NDArray, starts: NDArray, length: int) -> NDArray:
+    """Windows ``values[start : start + length]`` as rows, shape (len(starts), length); ends repeated."""
+    index = np.asarray(starts, dtype=np.int64)[:, None] + np.arange(length)
+    return values[np.clip(index, 0, len(values) - 1)]
+
+
+def refine(values: Floats, index: NDArray[np.int64]) -> Floats:
+    """Fractional places of extrema at `index`, by the parabola through three samples; within half a sample of it."""
+    if len(values) < 3:
+        return index.astype(np.float64)
+    middle = np.clip(index, 1, len(values) - 2)
+    before, here, after = values[middle - 1], values[middle], values[middle + 1]
+    bend = before - 2 * here + after
+    shift = np.where(bend != 0, 0.5 * (before - after) / np.where(bend == 0, 1, bend), 0.0)
+    return index + np.where(middle == index, np.clip(shift, -0.5, 0.5), 0.0)
+
+
+def runs(mask: NDArray[np.bool_]) -> NDArray[np.int64]:
+    """Stretches of True as rows ``[start, stop)``, shape (k, 2)."""
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], mask, [False]]).astype(np.int8)))
+    return edges.reshape(-1, 2)
+
+
+def grid(start_s: float, stop_s: float, step_s: float) -> Iterator[tuple[float, float]]:
+    """Stretches of the fixed grid (lines at multiples of `step_s` from the start of the record) that ``[start_s, stop_s)`` touches."""
+    for k in range(int(np.floor(start_s / step_s + 1e-9)), int(np.ceil(stop_s / step_s - 1e-9))):
+        yield k * step_s, (k + 1) * step_s

@@ -1,0 +1,353 @@
+"""Beats from the ECG and the arterial trace together.
+
+Every detector's event is a candidate. What the ECG says of a candidate (size, likeness to the QRS complexes of the minute, quiet around
+it) and what the artery says (an upstroke a transit time later, or none) add up to its weight; the sequence of beats is the set of
+candidates with the largest sum, found by dynamic programming over the intervals between them. So a burst of diathermy costs no beat while
+the artery shows it, and an extrasystole without a pulse stays while the ECG is quiet.
+
+What is learned (the QRS picture, its size, the transit time) is learned on a fixed grid of minutes, each from itself and its two
+neighbours.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+from scipy import ndimage
+
+from caval import tables
+from caval.recording import Signal
+from caval.registry import stage
+from caval.stages._signal import bandpass, cut, fill, grid, lowpass, moving_mean
+from caval.stages.detect import QRS_BAND_HZ
+
+__all__ = ["anchors"]
+
+Floats = NDArray[np.float64]
+
+_GRID_S = 60.0
+_SAME_S = 0.09
+"""Events of two ECG detectors this close are one candidate."""
+_DICROTIC_S = 0.42
+"""A weak upstroke this soon after a strong one is its dicrotic wave: ejection takes 0.25 to 0.35 s (common practice)."""
+_HALF_PICTURE_S = 0.06
+_REFRACTORY_S = 0.25
+_REACH_S = 0.10
+"""How far an upstroke may lie from R plus the transit time and still belong to it; a weak one may come as much later again."""
+_WEAK = 0.35
+"""Share of the usual upstroke's slope below which an upstroke is weak: a premature beat's, or a dicrotic wave."""
+
+
+@stage(name="anchors", gives=("beats",), margin_s=2 * _GRID_S)
+def anchors(
+    candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, *, transit_s: float = 0.20
+) -> pd.DataFrame:
+    """Fuse the candidates of single-channel detectors into one sequence of beats.
+
+    Parameters
+    ----------
+    candidates : DataFrame
+        Events of the detectors: ``time_s`` (s), ``detector``; arterial upstrokes are those of the detector ``upstroke``.
+    ecg, abp : Signal, optional
+        The channels the candidates came from; without an ECG the beats are upstrokes less the transit time.
+    transit_s : float
+        Time from R to the foot of the arterial upstroke, seconds, until it can be learned (0.15 to 0.25 s to the radial artery is
+        usual; common practice).
+
+    Returns
+    -------
+    DataFrame
+        ``beat, r_time_s, r_sd_s, rr_s, source, confidence``. `source` is ``fused`` when ECG and artery agree, else the one that shows
+        the beat; `r_sd_s` is the standard deviation of the R time, from the time resolution for ECG beats and from the spread
+        of the transit time for arterial ones.
+    """
+    time = candidates["time_s"].to_numpy(float)
+    is_foot = (candidates["detector"] == "upstroke").to_numpy()
+    feet = np.unique(time[is_foot]) if abp is not None else np.empty(0)
+    events, votes = _merge(time[~is_foot], candidates["detector"].to_numpy(object)[~is_foot]) if ecg is not None else (np.empty(0), np.empty(0))
+    if not len(feet) and not len(events):
+        return tables.empty("beats")
+    strength = _strength(abp, feet) if abp is not None else np.empty(0)
+    feet, strength = _without_dicrotic(feet, strength)
+    evidence = _ecg_evidence(ecg, events, feet[strength > _WEAK], transit_s) if ecg is not None and len(events) else _no_evidence(transit_s)
+    pool = _pool(events, votes, feet, strength, evidence)
+    chosen = _best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
+    return pd.DataFrame(
+        {
+            "beat": np.arange(len(chosen)),
+            "r_time_s": pool.time_s[chosen],
+            "r_sd_s": pool.sd_s[chosen],
+            "rr_s": np.nan,
+            "source": pool.source[chosen],
+            "confidence": 1.0 / (1.0 + np.exp(-1.5 * pool.weight[chosen])),
+        }
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class _Evidence:
+    """What the ECG says of each event, and the transit times learned from both.
+
+    `size` is the event's energy over the usual QRS's, `likeness` the correlation with the minute's QRS, `quiet` runs from 0 (the ECG
+    around is as loud as a QRS) to 1. `quiet_at_s`/`quiet_level` give it over time. Transit and its spread are per grid minute.
+    """
+
+    size: Floats
+    likeness: Floats
+    quiet: Floats
+    quiet_at_s: Floats
+    quiet_level: Floats
+    minute_s: Floats
+    transit_s: Floats
+    spread_s: Floats
+
+
+@dataclass(frozen=True, eq=False)
+class _Pool:
+    """Candidates in time order with their weight (log-odds, roughly)."""
+
+    time_s: Floats
+    weight: Floats
+    source: NDArray[np.object_]
+    sd_s: Floats
+
+
+def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
+    """Events of all ECG detectors as one list; where several coincide the time of ``qrs`` stands. Votes count the other detectors."""
+    own = np.sort(time[names == "qrs"])
+    other = np.sort(time[names != "qrs"])
+    if not len(own):
+        own = other[np.diff(other, prepend=-np.inf) > _SAME_S]
+    votes = np.zeros(len(own))
+    if len(own) and len(other):
+        at = _nearest(own, other)
+        far = np.abs(own[at] - other) > _SAME_S
+        votes[np.unique(at[~far])] = 1.0
+        lone = other[far][np.diff(other[far], prepend=-np.inf) > _SAME_S]
+        own, votes = np.concatenate([own, lone]), np.concatenate([votes, np.ones(len(lone))])
+        order = np.argsort(own, kind="stable")
+        own, votes = own[order], votes[order]
+    return own, votes
+
+
+def _nearest(sorted_times: Floats, query: Floats) -> NDArray[np.int64]:
+    """Index of the nearest of `sorted_times` for each query time."""
+    right = np.clip(np.searchsorted(sorted_times, query), 1, max(1, len(sorted_times) - 1))
+    left = right - 1
+    right = np.minimum(right, len(sorted_times) - 1)
+    return np.where(np.abs(sorted_times[right] - query) < np.abs(query - sorted_times[left]), right, left)
+
+
+def _no_evidence(transit_s: float) -> _Evidence:
+    none = np.empty(0)
+    return _Evidence(none, none, none, np.array([0.0]), np.array([0.0]), np.array([0.0]), np.array([transit_s]), np.array([0.03]))
+
+
+def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -> _Evidence:
+    """Size, likeness and quiet of each event, with the picture, the size and the transit time of its minute."""
+    values, missing = fill(ecg.values)
+    rate = ecg.sampling_rate
+    band = bandpass(values - np.median(values), rate, *QRS_BAND_HZ)
+    energy = np.sqrt(moving_mean(band**2, round(0.09 * rate)))
+    place = np.clip(np.rint(ecg.position(events)).astype(int), 0, len(values) - 1)
+    loudness = ndimage.maximum_filter1d(energy, round(0.08 * rate) | 1)[place]
+    step = max(1, round(0.04 * rate))
+    background = ndimage.percentile_filter(energy[::step], 45, size=round(1.6 * rate / step) | 1)
+    background_at_s = ecg.start_s + np.arange(len(background)) * step / rate
+    half = round(_HALF_PICTURE_S * rate)
+    shapes = cut(band, place - half, 2 * half + 1)
+    norms = np.sqrt((shapes**2).sum(axis=1)) + 1e-12
+
+    size, likeness = np.zeros(len(events)), np.zeros(len(events))
+    minutes, transits, spreads, usual_at = [], [], [], []
+    transit, spread, usual = transit_s, 0.03, float(np.median(loudness))
+    for start_s, stop_s in grid(events[0], events[-1] + 1e-9, _GRID_S):
+        near = (events >= start_s - _GRID_S) & (events < stop_s + _GRID_S)
+        here = (events >= start_s) & (events < stop_s)
+        if near.any():
+            usual, picture, transit, spread = _learn(events[near], loudness[near], shapes[near], norms[near], feet, transit, spread)
+            size[here] = loudness[here] / max(usual, 1e-12)
+            likeness[here] = shapes[here] @ picture / norms[here]
+        minutes.append((start_s + stop_s) / 2)
+        transits.append(transit)
+        spreads.append(spread)
+        usual_at.append(usual)
+    ratio = background / np.maximum(np.interp(background_at_s, minutes, usual_at), 1e-12)
+    quiet_level = np.clip((0.45 - ratio) / 0.30, 0.0, 1.0)
+    quiet_level[missing[::step]] = 0.0
+    quiet = quiet_level[np.clip(place // step, 0, len(quiet_level) - 1)]
+    return _Evidence(size, likeness, quiet, background_at_s, quiet_level, np.array(minutes), np.array(transits), np.array(spreads))
+
+
+def _learn(
+    events: Floats, loudness: Floats, shapes: Floats, norms: Floats, feet: Floats, transit: float, spread: float
+) -> tuple[float, Floats, float, float]:
+    """QRS size, QRS picture (unit norm), transit time and its spread from the events and upstrokes of three minutes.
+
+    The beats that teach are the events an upstroke follows; without an artery, the loudest of their neighbourhood.
+    """
+    window_feet = feet[(feet > events[0]) & (feet < events[-1] + 0.5)]
+    teach = _followed(events, loudness, window_feet)
+    if teach.sum() < 5:
+        top = np.array([loudness[np.abs(events - t) < 1.2].max() for t in events])
+        teach = loudness > 0.7 * np.minimum(top, np.median(top) * 1.5)
+    usual = float(np.median(loudness[teach]))
+    fair = teach & (loudness > 0.4 * usual) & (loudness < 2.5 * usual)
+    unit = shapes[fair] / norms[fair, None] if fair.any() else shapes / norms[:, None]
+    picture = np.median(unit, axis=0)
+    alike = unit @ picture > 0.5 * np.linalg.norm(picture)
+    if alike.sum() >= 3:
+        picture = np.median(unit[alike], axis=0)
+    picture = picture / (np.linalg.norm(picture) + 1e-12)
+    good = fair & (shapes @ picture / norms > 0.8)
+    if good.sum() >= 8 and len(window_feet) >= 8:
+        after = window_feet[np.clip(np.searchsorted(window_feet, events[good] + 0.05), 0, len(window_feet) - 1)] - events[good]
+        after = after[(after > 0.05) & (after < 0.45)]
+        if len(after) >= 8:
+            transit = float(np.median(after))
+            spread = float(np.clip(1.4826 * np.median(np.abs(after - transit)), 0.004, 0.04))
+    return usual, picture, transit, spread
+
+
+def _followed(events: Floats, loudness: Floats, feet: Floats) -> NDArray[np.bool_]:
+    """Which event is the loudest of those 0.05 to 0.45 s before an upstroke."""
+    teach = np.zeros(len(events), dtype=bool)
+    first, last = np.searchsorted(events, feet - 0.45), np.searchsorted(events, feet - 0.05)
+    for low, high in zip(first, last, strict=True):
+        if high > low:
+            teach[low + int(np.argmax(loudness[low:high]))] = True
+    return teach
+
+
+def _strength(abp: Signal, feet: Floats) -> Floats:
+    """Steepest slope of each upstroke over the usual one around it (the running median of the strong ones), shape (n,)."""
+    if not len(feet):
+        return np.empty(0)
+    values, _ = fill(abp.values)
+    rate = abp.sampling_rate
+    slope = np.gradient(lowpass(values, rate, 12.0)) * rate
+    steepest = cut(slope, np.rint(abp.position(feet)).astype(int), max(2, round(0.2 * rate))).max(axis=1)
+    strong = ndimage.maximum_filter1d(steepest, 3, mode="nearest")
+    usual = ndimage.median_filter(strong, size=min(41, len(strong) | 1), mode="nearest")
+    return steepest / np.maximum(usual, 1e-9)
+
+
+def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
+    """Upstrokes and strengths less the weak ones that closely follow a strong one: dicrotic waves."""
+    strong = feet[strength >= _WEAK]
+    if not len(strong):
+        return feet, strength
+    before = np.searchsorted(strong, feet) - 1
+    since = np.where(before >= 0, feet - strong[np.maximum(before, 0)], np.inf)
+    keep = (strength >= _WEAK) | (since > _DICROTIC_S)
+    return feet[keep], strength[keep]
+
+
+def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: _Evidence) -> _Pool:
+    """Every candidate with its weight: ECG events, and upstrokes that no ECG event explains, set back by the transit time."""
+    transit = np.interp(feet, evidence.minute_s, evidence.transit_s)
+    expected = feet - transit
+    ecg_says = _ecg_weight(votes, evidence) if len(events) else np.empty(0)
+    weak = strength < _WEAK
+    got_pulse, off_s = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
+    got_ripple, _ = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
+    has_foot = got_pulse | got_ripple
+    awake = _awake(feet[~weak], events)
+    artery_says = np.where(got_pulse, 2.0 - 8.0 * off_s, np.where(got_ripple, 0.6, -1.6 * awake))
+    explained = np.zeros(len(feet), dtype=bool)
+    if len(events) and len(feet):
+        explained = np.abs(events[_nearest(events, expected)] - expected) < _SAME_S
+    lone, lone_strength = expected[~explained], strength[~explained]
+    heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level) if len(events) else np.zeros(len(lone))
+    time = np.concatenate([events, lone])
+    weight = np.concatenate([ecg_says + artery_says, 2.8 * _ramp(lone_strength, 0.2, 0.6) - 1.0 - 3.2 * heard])
+    source = np.concatenate(
+        [np.where(has_foot, np.where(ecg_says > -0.5, "fused", "abp"), "ecg").astype(object), np.full(len(lone), "abp", dtype=object)]
+    )
+    spread = np.interp(time, evidence.minute_s, evidence.spread_s)
+    sd = np.where(source == "abp", np.maximum(spread, 0.01), 0.004)
+    order = np.argsort(time, kind="stable")
+    return _Pool(time[order], weight[order], source[order], sd[order])
+
+
+def _ecg_weight(votes: Floats, evidence: _Evidence) -> Floats:
+    """Log-odds of a QRS from the ECG alone: in quiet, size decides and any shape will do; in noise only the minute's shape counts."""
+    big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -6.0, -3.0)
+    alike = np.clip(evidence.likeness, 0.0, 1.0) ** 3 * _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
+    in_quiet = 3.6 * big + 1.2 * alike - 2.2
+    in_noise = 4.2 * alike - 2.0
+    return evidence.quiet * in_quiet + (1 - evidence.quiet) * in_noise + 0.5 * (votes - 0.5)
+
+
+def _ramp(value: Floats, low: float, high: float) -> Floats:
+    return np.clip((value - low) / (high - low), 0.0, 1.0)
+
+
+def _assign(events: Floats, weight: Floats, expected: Floats, reach_s: tuple[float, float]) -> tuple[NDArray[np.bool_], Floats]:
+    """Give each upstroke to one event, the likelier first, no more than `reach_s` after or before its expected R.
+
+    Returns who got one and how far off it is (s).
+    """
+    got, distance = np.zeros(len(events), dtype=bool), np.zeros(len(events))
+    first, last = np.searchsorted(events, expected - reach_s[1]), np.searchsorted(events, expected + reach_s[0])
+    for low, high, place in zip(first, last, expected, strict=True):
+        if high > low:
+            best = low + int(np.argmax(weight[low:high] - 12.0 * np.abs(events[low:high] - place)))
+            got[best], distance[best] = True, abs(events[best] - place)
+    return got, distance
+
+
+def _awake(feet: Floats, at_s: Floats) -> Floats:
+    """0 to 1: whether the artery shows pulses around a time (at least four upstrokes within 4 s either way)."""
+    if not len(feet):
+        return np.zeros(len(at_s))
+    count = np.searchsorted(feet, at_s + 4.0) - np.searchsorted(feet, at_s - 4.0)
+    return np.clip((count - 1) / 3.0, 0.0, 1.0)
+
+
+def _usual_interval(pool: _Pool) -> Floats:
+    """Running median interval between likely candidates, s, at every candidate."""
+    likely = pool.time_s[pool.weight > 0.5]
+    if len(likely) < 4:
+        return np.full(len(pool.time_s), 0.85)
+    gaps = np.diff(likely)
+    usual = ndimage.median_filter(np.clip(gaps, 0.25, 2.5), size=min(15, len(gaps)), mode="nearest")
+    return np.interp(pool.time_s, likely[1:], usual)
+
+
+def _best_sequence(time: Floats, weight: Floats, usual: Floats) -> NDArray[np.int64]:
+    """Indices of the candidates whose weights and intervals add up to the most.
+
+    An interval near the usual one adds up to 0.8, one much shorter takes away; none is shorter than the refractory time.
+    """
+    total, back = np.array(weight, dtype=float), np.full(len(time), -1)
+    best_so_far = -np.inf
+    first = np.searchsorted(time, time - 2.2 * usual)
+    last = np.searchsorted(time, time - _REFRACTORY_S, side="right")
+    running = np.full(len(time) + 1, -np.inf)  # running[k]: the best total among candidates before k
+    running_at = np.full(len(time) + 1, -1)
+    for i in range(len(time)):
+        low, high = first[i], last[i]
+        best, link = max(0.0, running[low]), (running_at[low] if running[low] > 0 else -1)
+        if high > low:
+            share = (time[i] - time[low:high]) / usual[i]
+            gain = 0.8 * np.exp(-0.5 * ((share - 1.0) / 0.10) ** 2) - 3.0 * np.clip(0.6 - share, 0.0, None)
+            linked = total[low:high] + gain
+            k = int(np.argmax(linked))
+            if linked[k] > best:
+                best, link = float(linked[k]), low + k
+        total[i] = weight[i] + best
+        back[i] = link
+        better = total[i] > best_so_far
+        best_so_far = max(best_so_far, total[i])
+        running[i + 1] = best_so_far
+        running_at[i + 1] = i if better else running_at[i]
+    chosen = []
+    i = int(np.argmax(total)) if len(total) and total.max() > 0 else -1
+    while i >= 0:
+        chosen.append(i)
+        i = back[i]
+    return np.array(chosen[::-1], dtype=np.int64)

@@ -1,0 +1,174 @@
+"""Which stretches of which channel cannot be read, and why: what is dead, flat, clipped, disconnected, implausible or buried in movement."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+from numpy.typing import NDArray
+from scipy import ndimage
+
+from caval import tables
+from caval.recording import Signal
+from caval.registry import stage
+from caval.stages._signal import fill, lowpass, moving_mean, runs
+
+__all__ = ["quality"]
+
+Floats = NDArray[np.float64]
+Mask = NDArray[np.bool_]
+
+_LEVEL_MMHG = {"cvp": (-12.0, 45.0), "abp": (10.0, 320.0), "pap": (-12.0, 150.0)}
+"""Lowest and highest level, over a second and a half, that a pressure in place takes (own choice, wide of any published normal value)."""
+_SMOOTH_S = 1.5
+_NEIGHBOURS_S = 60.0
+_GUARD_S = 0.25
+
+
+@stage(name="quality", gives=("spans",), margin_s=_NEIGHBOURS_S + 15.0)
+def quality(
+    cvp: Signal,
+    ecg: Signal | None = None,
+    abp: Signal | None = None,
+    pap: Signal | None = None,
+    *,
+    flat_s: float = 1.0,
+    movement: float = 2.6,
+    climb_mmhg: float = 8.0,
+) -> pd.DataFrame:
+    """Spans in which a channel cannot be read.
+
+    Parameters
+    ----------
+    cvp, ecg, abp, pap : Signal
+    flat_s : float
+        A trace that keeps one value this long, seconds, is flat.
+    movement : float
+        A second and a half of venous pressure whose range is this many times the usual one (median of the two minutes around) is noise.
+    climb_mmhg : float
+        A rise or fall of the venous level by more than this in 6 s, going one way all the time, is no vein's doing.
+
+    Returns
+    -------
+    DataFrame
+        ``onset_s, duration_s, kind, channel, detail``; kinds as in `caval.vocabulary.SPANS`. Stretches of two kinds may overlap.
+    """
+    found: list[pd.DataFrame] = []
+    for role, signal in (("cvp", cvp), ("ecg", ecg), ("abp", abp), ("pap", pap)):
+        if signal is None or len(signal) < 2:
+            continue
+        values, missing = fill(signal.values)
+        _add(found, signal, missing, "gap", "not recorded")
+        if missing.all():
+            continue
+        still = _still(values, signal.sampling_rate, flat_s) & ~missing
+        dead = np.zeros_like(still)
+        if role in _LEVEL_MMHG:
+            dead = _level(found, signal, values, still, *_LEVEL_MMHG[role])
+        _add(found, signal, still & ~dead, "flat", f"one value for {flat_s:g} s or more")
+        _add(found, signal, _clipped(values, signal.sampling_rate) & ~missing & ~still, "clipped", "stands at the recorder's limit")
+        if role == "cvp":
+            blank = missing | still
+            _add(found, signal, _climbing(values, signal.sampling_rate, climb_mmhg) & ~blank, "implausible", "the level climbs or falls without a turn")
+            _add(found, signal, _moved(values, blank, signal, movement), "noise", f"range above {movement:g} times the usual")
+    return pd.concat(found, ignore_index=True) if found else tables.empty("spans")
+
+
+def _add(found: list[pd.DataFrame], signal: Signal, mask: Mask, kind: str, detail: str) -> None:
+    """Append the stretches of `mask` as spans."""
+    stretches = runs(mask)
+    if len(stretches):
+        onset, stop = (signal.start_s + stretches.T / signal.sampling_rate)
+        found.append(pd.DataFrame({"onset_s": onset, "duration_s": stop - onset, "kind": kind, "channel": signal.label, "detail": detail}))
+
+
+def _keep_long(mask: Mask, samples: int) -> Mask:
+    kept = np.zeros_like(mask)
+    for start, stop in runs(mask):
+        kept[start:stop] = stop - start >= samples
+    return kept
+
+
+def _widen(mask: Mask, samples: int) -> Mask:
+    return ndimage.maximum_filter1d(mask, 2 * samples + 1) if mask.any() else mask
+
+
+def _still(values: Floats, rate: float, flat_s: float) -> Mask:
+    """Samples inside a run of one value that lasts `flat_s`."""
+    same = np.diff(values) == 0
+    still = np.concatenate([same, [False]]) | np.concatenate([[False], same])
+    return _keep_long(still, max(2, round(flat_s * rate)))
+
+
+def _level(found: list[pd.DataFrame], signal: Signal, values: Floats, still: Mask, low: float, high: float) -> Mask:
+    """Add what the level of a pressure says, and return where the line is not in the vessel."""
+    level = moving_mean(values, round(_SMOOTH_S * signal.sampling_rate))
+    dead = ((level < low) | (np.abs(level) < 0.05)) & still
+    strange = ((level < low) | (level > high)) & ~dead
+    _add(found, signal, dead, "disconnected", "no pulse, and a level of zero or below what a vessel holds")
+    _add(found, signal, _widen(strange, round(_GUARD_S * signal.sampling_rate)) & ~dead, "implausible", f"level outside {low:g} to {high:g} mmHg")
+    return dead
+
+
+def _clipped(values: Floats, rate: float) -> Mask:
+    """Runs of one value, 40 ms or more, at the highest or lowest value of the seconds around, entered or left at a step.
+
+    A rounded top whose samples share a value by coarse resolution is entered by single steps of the recorder; a cut one is not.
+    """
+    same = np.diff(values) == 0
+    still = np.concatenate([same, [False]]) | np.concatenate([[False], same])
+    still = _keep_long(still, max(4, round(0.04 * rate)))
+    stretches = runs(still)
+    if not len(stretches):
+        return still
+    steps = np.abs(np.diff(values))
+    finest = steps[steps > 0].min() if (steps > 0).any() else np.inf
+    width = round(8.0 * rate) | 1
+    at_limit = (values >= ndimage.maximum_filter1d(values, width)) | (values <= ndimage.minimum_filter1d(values, width))
+    clipped = np.zeros_like(still)
+    for start, stop in stretches:
+        edge = max(steps[start - 1] if start else 0.0, steps[stop - 1] if stop < len(values) else 0.0)
+        clipped[start:stop] = at_limit[start] and edge > 3.5 * finest
+    return clipped
+
+
+def _climbing(values: Floats, rate: float, climb_mmhg: float) -> Mask:
+    """Where the level goes one way for six seconds and by more than `climb_mmhg`."""
+    step = max(1, round(0.25 * rate))
+    level = moving_mean(values, round(_SMOOTH_S * rate))[::step]
+    reach = round(3.0 / (step / rate))
+    if len(level) <= 2 * reach + 2:
+        return np.zeros(len(values), dtype=bool)
+    move = np.diff(level, prepend=level[0])
+    change = np.convolve(move, np.ones(2 * reach + 1), "same")
+    path = np.convolve(np.abs(move), np.ones(2 * reach + 1), "same")
+    return _spread(_widen((np.abs(change) > climb_mmhg) & (np.abs(change) > 0.9 * path), reach), step, len(values))
+
+
+def _spread(mask: Mask, step: int, length: int) -> Mask:
+    """A mask of every `step`-th sample over all samples."""
+    return mask[np.minimum(np.arange(length) // step, len(mask) - 1)]
+
+
+def _moved(values: Floats, blank: Mask, signal: Signal, movement: float) -> Mask:
+    """Where the venous trace ranges much wider than it does around, and no less than 4 mmHg beyond it."""
+    rate = signal.sampling_rate
+    smooth = lowpass(values, rate, 20.0)
+    step = max(1, round(0.1 * rate))
+    width = round(1.2 * rate) | 1
+    span = (ndimage.maximum_filter1d(smooth, width) - ndimage.minimum_filter1d(smooth, width))[::step]
+    usual = _local_median(span, ~blank[::step], signal.start_s, step / rate)
+    return _spread((span > movement * usual) & (span > usual + 4.0), step, len(values))
+
+
+def _local_median(level: Floats, good: Mask, start_s: float, step_s: float) -> Floats:
+    """Median of the good values within a minute either way, learned on the fixed grid of quarter minutes, straight lines between."""
+    time = start_s + np.arange(len(level)) * step_s
+    knots = np.arange(np.floor(start_s / 15.0), np.ceil(time[-1] / 15.0) + 1) * 15.0
+    medians = np.full(len(knots), np.nan)
+    for i, knot in enumerate(knots):
+        near = slice(*np.searchsorted(time, [knot - _NEIGHBOURS_S, knot + _NEIGHBOURS_S]))
+        chosen = level[near][good[near]]
+        if len(chosen):
+            medians[i] = np.median(chosen)
+    known = np.isfinite(medians)
+    return np.interp(time, knots[known], medians[known]) if known.any() else np.full(len(level), np.inf)
