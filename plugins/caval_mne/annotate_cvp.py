@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import mne
+import numpy as np
 from mne.utils import logger
 from mne.utils import verbose as _verbose
 
@@ -20,6 +21,7 @@ def annotate_cvp(
     *,
     unit: str = "mmHg",
     reject_by_annotation: bool = True,
+    mark_bad: bool = True,
     verbose: bool | str | int | None = None,  # noqa: ARG001  (read by MNE's decorator)
 ) -> mne.Annotations:
     """Mark the waves of the venous pressure and the stretches that cannot be read.
@@ -37,15 +39,19 @@ def annotate_cvp(
         What the numbers in the pressure channels are: ``mmHg``, ``cmH2O``, ``kPa``, ``Pa``, ``hPa`` or ``mbar``.
     reject_by_annotation : bool
         Leave out stretches that are annotated ``BAD…`` already, for the channel or for all.
+    mark_bad : bool
+        Begin the text of unusable stretches with ``BAD_``, so that epochs over them are rejected. MNE (as of 1.13) rejects such epochs
+        whatever channels they hold and whatever ``ch_names`` the annotation has: say False where other channels count as well, and
+        the texts are ``CVP/flat`` and so on.
     verbose : bool | str | int | None
         Control verbosity of the logging output, as in MNE.
 
     Returns
     -------
     annot : instance of Annotations
-        ``CVP/a``, ``CVP/c``, … with duration 0, and ``BAD_CVP/flat`` and so on. Every one has ``ch_names``: an unusable stretch of the
-        pressure line does not throw away other channels' epochs. ``orig_time`` is the ``meas_date`` of `raw`;
-        ``raw.set_annotations(raw.annotations + annot)`` puts them in place, also when `raw` is cropped.
+        ``CVP/a``, ``CVP/c``, … with duration 0, and ``BAD_CVP/flat`` and so on, every one with the ``ch_names`` of its channel.
+        ``orig_time`` is the ``meas_date`` of `raw`, so ``raw.set_annotations(raw.annotations + annot)`` puts them in place, also when
+        `raw` is cropped.
 
     Raises
     ------
@@ -79,17 +85,18 @@ def annotate_cvp(
     for line in result.warnings:
         logger.info(line)
     logger.info(f"Number of CVP marks: {len(result.marks)} on {len(result.beats)} beats; stretches set aside: {len(result.spans)}")
-    return _annotations(raw, result)
+    return _annotations(raw, result, mark_bad)
 
 
-def _annotations(raw: mne.io.BaseRaw, result: Result) -> mne.Annotations:
+def _annotations(raw: mne.io.BaseRaw, result: Result, mark_bad: bool) -> mne.Annotations:
     track = result.track
+    texts = np.asarray([t if mark_bad else t.removeprefix("BAD_") for t in track.texts], dtype=object)
     labels = result.recording.labels
     date = raw.info["meas_date"]
     return mne.Annotations(
         onset=track.onset_s + (raw.first_time if date is not None else 0.0),
         duration=track.duration_s,
-        description=track.text,
+        description=texts[track.code] if len(track) else [],
         orig_time=date,
         ch_names=[[labels[i]] if i >= 0 else [] for i in track.channel],
     )

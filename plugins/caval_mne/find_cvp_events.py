@@ -14,6 +14,8 @@ from caval_mne._recording import mark_raw
 
 __all__ = ["find_cvp_events"]
 
+_HARMLESS = [kind for kind, term in SPANS.items() if not term.unusable]
+
 
 @_verbose
 def find_cvp_events(
@@ -82,7 +84,7 @@ def find_cvp_events(
     samples = np.clip(np.rint(time_s * raw.info["sfreq"]).astype(np.int64), 0, raw.n_times - 1) + raw.first_samp
     events = np.column_stack([samples, np.zeros_like(samples), np.full_like(samples, event_id)])
 
-    spans = result.spans[(result.spans["channel"] == label) & [k not in SPANS or SPANS[k].unusable for k in result.spans["kind"]]]
+    spans = result.spans[(result.spans["channel"] == label) & ~result.spans["kind"].isin(_HARMLESS)]
     onset = spans["onset_s"].to_numpy(float)
     readable_s = _readable(onset, onset + spans["duration_s"].to_numpy(float), tstart, raw.n_times / raw.info["sfreq"])
     rate = float(60.0 * len(events) / readable_s) if readable_s > 0 else 0.0

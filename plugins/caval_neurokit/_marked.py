@@ -92,10 +92,11 @@ def quality_of(result: Result, sampling_rate: float, length: int) -> NDArray[np.
         last = r[-1] + (np.median(np.diff(r)) if len(r) > 1 else sampling_rate)
         bounds = np.append(r, min(int(last), length))
         quality[bounds[0] : bounds[-1]] = np.repeat(per_beat, np.diff(bounds))
-    spans = result.spans[result.spans["channel"] == "CVP"]
-    for onset, duration, kind in zip(spans["onset_s"], spans["duration_s"], spans["kind"], strict=True):
-        if kind not in SPANS or SPANS[kind].unusable:
-            quality[max(0, int(np.ceil(onset * sampling_rate))) : max(0, int(np.ceil((onset + duration) * sampling_rate)))] = 0.0
+    harmless = [kind for kind, term in SPANS.items() if not term.unusable]
+    spans = result.spans[(result.spans["channel"] == "CVP") & ~result.spans["kind"].isin(harmless)]
+    for onset, duration in zip(spans["onset_s"], spans["duration_s"], strict=True):
+        start, stop = np.ceil(np.maximum([onset, onset + duration], 0.0) * sampling_rate).astype(int)
+        quality[start:stop] = 0.0
     return quality
 
 

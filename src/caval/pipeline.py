@@ -117,8 +117,11 @@ class Pipeline:
         if not start_s < end_s:
             raise InputError(f"nothing to analyse between {start_s:g} s and {end_s:g} s; the record has {recording.duration_s:g} s")
         done: dict[str, pd.DataFrame] = {name: table.copy() for name, table in (given or {}).items()}
-        for stage in self._order(roles, done):
-            done |= self._run_stage(stage, signals, done, (start_s, end_s), progress)
+        ordered = self._order(roles, done)
+        reach = sum(stage.margin_s for stage in ordered)  # what stages see of one another's margins
+        stretch = max(0.0, start_s - reach), min(end_s + reach, recording.duration_s)
+        for stage in ordered:
+            done |= self._run_stage(stage, signals, done, stretch, progress)
         return {name: _within(name, table, start_s, end_s) for name, table in done.items()}
 
     def _order(self, roles: Mapping[str, str], given: Mapping[str, pd.DataFrame]) -> list[Stage]:

@@ -110,7 +110,7 @@ def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame 
     """
     table = beats[["beat", "r_time_s", "r_sd_s", "rr_s", "source"]].copy()
     per_beat = (readings if readings is not None else empty("readings")).set_index("beat")
-    table["usable"] = table["beat"].map(per_beat["usable"]).fillna(False).astype(bool)
+    table["usable"] = table["beat"].map(per_beat["usable"]).eq(True)
     table["reason"] = table["beat"].map(per_beat["reason"]).astype(object).where(table["beat"].isin(per_beat.index), "not measured")
     table["rhythm"] = ""
     rows = pd.Series(np.arange(len(table)), index=table["beat"])

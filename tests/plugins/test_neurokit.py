@@ -25,6 +25,7 @@ RATE = 250
 WAVES = {"a": "CVP_A_Peaks", "c": "CVP_C_Peaks", "x": "CVP_X_Troughs", "v": "CVP_V_Peaks", "y": "CVP_Y_Troughs"}
 MARKERS = ["CVP_R_Peaks", "CVP_A_Peaks", "CVP_Z_Troughs", "CVP_C_Peaks", "CVP_X_Troughs", "CVP_V_Peaks", "CVP_Y_Troughs", "CVP_H_Peaks"]
 DETECTORS = [neurokit, rodrigues2021, engzeemod2012]
+SETTLED_S = {neurokit: 1, rodrigues2021: 1, engzeemod2012: 5}  # ends of the host's filters; engzeemod2012 learns its threshold for 5 s
 
 
 @pytest.fixture(scope="module")
@@ -59,7 +60,7 @@ def _matched(found, truth, within_s):
 def test_detector_finds_every_r_peak_of_the_generator(detect, ecg):
     signal, truth = ecg
     found = detect(signal)
-    inner = truth[(truth > 1) & (truth < 29)]  # the host's filters settle at the ends
+    inner = truth[(truth > SETTLED_S[detect]) & (truth < 29)]
     assert found.dtype == np.float64
     # 20 ms: a quarter of a QRS complex, far from its neighbours P and T
     assert _matched(found, inner, 0.02)[0] == len(inner)
@@ -95,7 +96,7 @@ def test_detector_bridges_a_gap_and_finds_nothing_in_it(detect, ecg):
     values[5000:7500] = np.nan  # 10 s to 15 s
     found = detect(Signal(values, 500.0))
     assert not ((found >= 10) & (found < 15)).any()
-    away = truth[((truth > 1) & (truth < 9.5)) | ((truth > 16.5) & (truth < 29))]
+    away = truth[((truth > SETTLED_S[detect]) & (truth < 9.5)) | ((truth > 16.5) & (truth < 29))]
     assert _matched(found, away, 0.02)[0] == len(away)
 
 

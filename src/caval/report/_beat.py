@@ -17,12 +17,14 @@ if TYPE_CHECKING:
 
     from caval.result import Result
 
-__all__ = ["MOST_BEATS", "draw_beat", "draw_readings", "wave_summary"]
+__all__ = ["MOST_BEATS", "draw_beat", "draw_readings", "states_that_count", "wave_summary"]
 
 MOST_BEATS = 200
 """Beats that are read for the picture, spread over the record; enough for steady quartiles, quick from any file."""
 _BEFORE_S = 0.30
 _GRID_HZ = 250.0
+_LEAST_SHARE = 0.2
+"""Waves that fewer of the beats show stand in the numbers, not in the picture."""
 
 
 @dataclass(frozen=True)
@@ -36,12 +38,20 @@ class WaveSummary:
     mmhg: NDArray[np.float64]
 
 
+def states_that_count(wave: str) -> tuple[str, ...]:
+    """States in which a mark's pressure is a reading of its own."""
+    return ("clear", "weak", "fused") if wave == "z" else ("clear", "weak")
+
+
 def wave_summary(result: Result) -> list[WaveSummary]:
-    """Every wave that at least three usable beats show as clear or weak, in the order of one beat."""
+    """Every wave that at least three usable beats show, in the order of one beat.
+
+    Fused marks are left out, except for z, which is a place to read at, not an extremum, and stands without one.
+    """
     usable = result.beats[result.beats["usable"].to_numpy(bool)]
     found = []
     for wave in WAVES:
-        rows = usable[usable[f"{wave}_state"].isin(["clear", "weak"])]
+        rows = usable[usable[f"{wave}_state"].isin(states_that_count(wave))]
         if len(rows) >= 3:
             after = (rows[f"{wave}_time_s"] - rows["r_time_s"]).to_numpy(float)
             quartiles = [np.nanpercentile(v, [25, 50, 75]) for v in (after, rows[f"{wave}_mmhg"].to_numpy(float))]
@@ -110,7 +120,8 @@ def _stack(result: Result, role: str, usable: pd.DataFrame, offsets: NDArray) ->
 
 
 def _draw_summary(ax: Axes, summary: list[WaveSummary], low: NDArray, high: NDArray) -> None:
-    """Marks at their median place with quartile bars."""
+    """Marks at their median place with quartile bars; a wave that few beats show would float beside the median beat of all."""
+    summary = [s for s in summary if s.share >= _LEAST_SHARE]
     corners = [q for s in summary for q in (s.mmhg[0], s.mmhg[2])]
     ax.set_ylim(*_ink.limits(np.r_[low, high, corners], below=0.17, above=0.18, least=2.0))
     for s in summary:

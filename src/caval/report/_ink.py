@@ -159,7 +159,7 @@ def draw_mark(ax: Axes, wave: str, state: str, time: NDArray, value: NDArray, *,
 
 
 def letters(ax: Axes, items: Sequence[tuple[float, float, str]], *, points: float = LETTER_PT) -> None:
-    """Write the letter of each ``(x, y, wave)`` above peaks and below nadirs, moved outwards where two would touch. Limits must be set already."""
+    """Write the letter of each ``(x, y, wave)`` above peaks and below nadirs, farther out where two would touch; after the limits are set."""
     from matplotlib.patheffects import withStroke
 
     halo = [withStroke(linewidth=2.2, foreground="white")]

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from caval.recording import Signal
 from caval.report import _ink
 from caval.vocabulary import STATES, WAVES
 
@@ -15,8 +16,10 @@ if TYPE_CHECKING:
 
     from caval.result import Result
 
-__all__ = ["STRIP_S", "choose_strip", "draw_strip"]
+__all__ = ["SEEN_ON_ECG", "STRIP_S", "choose_strip", "draw_strip"]
 
+SEEN_ON_ECG = ("ecg", "fused", "given")
+"""Sources of beats whose R is not an estimate from other traces."""
 STRIP_S = 9.0
 """Two to four breaths, eight to fifteen beats: what an eye takes in at once."""
 _LEAD_S = 0.35
@@ -97,7 +100,7 @@ def draw_strip(axes: dict[str, Axes], result: Result, stretch: tuple[float, floa
         ax.set_xlim(*stretch)
         signal = _ink.read_role(result, role, *stretch)
         spans = _ink.merged(result.spans, signal.label)
-        _set_limits(ax, role, signal.values, signal.time_s, spans)
+        _set_limits(ax, role, signal, spans)
         _ink.shade(ax, spans, inside=stretch, at_top=role != "ecg")
         ax.vlines(r_times, 0, 1, transform=ax.get_xaxis_transform(), color=_ink.PALE, linewidth=0.9, zorder=1)
         ax.plot(signal.time_s, signal.values, color=_ink.ROLE_INK[role], linewidth=0.9 if role == "ecg" else 1.2, zorder=3)
@@ -106,7 +109,7 @@ def draw_strip(axes: dict[str, Axes], result: Result, stretch: tuple[float, floa
             _corner(ax, signal.label)
         ax.set_xticks(_ink.ticks(*stretch, steps))
         ax.xaxis.set_major_formatter(write_time)
-        ax.yaxis.set_label_coords(-0.052, 0.5)
+        ax.yaxis.set_label_coords(-0.058, 0.5)
         ax.tick_params(labelbottom=False)
     bottom = list(axes.values())[-1]
     bottom.tick_params(labelbottom=True)
@@ -117,12 +120,19 @@ def draw_strip(axes: dict[str, Axes], result: Result, stretch: tuple[float, floa
         _draw_marks(axes["cvp"], result, stretch)
 
 
-def _set_limits(ax: Axes, role: str, values: NDArray, time: NDArray, spans: list[tuple[float, float, str]]) -> None:
-    """Limits by what is usable: a flush must not press the waves flat."""
+def _set_limits(ax: Axes, role: str, signal: Signal, spans: list[tuple[float, float, str]]) -> None:
+    """Limits by most of what is usable: a flush or a burst of diathermy must not press the waves flat."""
+    values, time = signal.values, signal.time_s
     good = np.isfinite(values)
     for start, stop, _ in spans:
         good &= (time < start) | (time > stop)
     shown = values[good] if good.sum() > 10 else values
+    pieces = [p for p in np.array_split(shown, max(1, round(len(shown) / signal.sampling_rate))) if np.isfinite(p).any()]
+    if pieces:
+        # Each piece of about a second holds a beat; one beat more than half as tall again as most is let out of the picture.
+        low = np.quantile([np.nanmin(p) for p in pieces], 0.25)
+        high = np.quantile([np.nanmax(p) for p in pieces], 0.75)
+        shown = np.clip(shown, low - 0.5 * (high - low), high + 0.5 * (high - low))
     room = {"ecg": (0.08, 0.30, 0.2), "cvp": (0.20, 0.20, 2.0), "abp": (0.08, 0.12, 5.0)}[role]
     ax.set_ylim(*_ink.limits(shown, below=room[0], above=room[1], least=room[2]))
 
@@ -136,7 +146,7 @@ def _corner(ax: Axes, text: str) -> None:
 
 def _write_r(ax: Axes, times: NDArray, source: NDArray) -> None:
     """A small triangle and R for beats seen on the ECG, an open triangle for those that other traces show."""
-    own = np.isin(source, ["ecg", "fused", "given"])
+    own = np.isin(source, SEEN_ON_ECG)
     for mask, face in ((own, _ink.ROLE_INK["ecg"]), (~own, "white")):
         ax.scatter(
             times[mask], np.full(mask.sum(), 0.90), marker="v", s=22, transform=ax.get_xaxis_transform(), facecolors=face,

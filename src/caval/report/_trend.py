@@ -10,6 +10,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from caval.report import _ink
+from caval.report._beat import states_that_count
 from caval.vocabulary import WAVES
 
 if TYPE_CHECKING:
@@ -55,10 +56,13 @@ def draw_trend(ax: Axes, result: Result, strip: tuple[float, float]) -> None:
         color = WAVES[name].color if name in WAVES else _ink.INK
         x, (low, middle, high) = _stairs(edges, quartiles)
         ax.fill_between(x, low, high, color=color, alpha=0.14, linewidth=0, zorder=2)
-        ax.plot(x, middle, color=color, linewidth=1.8 if name == "mean" else 1.2, zorder=3)
+        ax.plot(x, middle, color=color, linewidth=1.8 if name == "mean" else 1.2, zorder=3.2 if name == "mean" else 3)
     _name_lines(ax, lines)
     middle_s, half_s = sum(strip) / 2, max(strip[1] - strip[0], duration_s / 200) / 2  # never too narrow to see
-    ax.plot([middle_s - half_s, middle_s + half_s], [0, 0], transform=ax.get_xaxis_transform(), color=_ink.INK, linewidth=4, solid_capstyle="butt", clip_on=False, zorder=6)
+    ax.plot(
+        [middle_s - half_s, middle_s + half_s], [0, 0], transform=ax.get_xaxis_transform(), color=_ink.INK, linewidth=4,
+        solid_capstyle="butt", clip_on=False, zorder=6,
+    )
     ax.set_xticks(_ink.ticks(0, duration_s, steps, most=16))
     ax.xaxis.set_major_formatter(write_time)
     ax.set_ylabel("mmHg", fontsize=9, color=_ink.INK)
@@ -73,7 +77,7 @@ def draw_trend(ax: Axes, result: Result, strip: tuple[float, float]) -> None:
 def _lines(usable: pd.DataFrame, edges: NDArray) -> dict[str, NDArray[np.float64]]:
     time = usable["r_time_s"].to_numpy(float)
     values = {"mean": usable["mean_mmhg"].to_numpy(float)} | {
-        w: usable[f"{w}_mmhg"].where(usable[f"{w}_state"].isin(["clear", "weak"])).to_numpy(float) for w in _SHOWN
+        w: usable[f"{w}_mmhg"].where(usable[f"{w}_state"].isin(states_that_count(w))).to_numpy(float) for w in _SHOWN
     }
     found = {name: window_quartiles(time, value, edges) for name, value in values.items()}
     return {name: quartiles for name, quartiles in found.items() if np.isfinite(quartiles).any()}

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 from caval.report import _ink
 from caval.report._beat import draw_beat, draw_readings
-from caval.report._strip import choose_strip, draw_strip
+from caval.report._strip import SEEN_ON_ECG, choose_strip, draw_strip
 from caval.report._trend import draw_trend
 from caval.vocabulary import WAVES
 
@@ -53,7 +53,7 @@ def figure(result: Result) -> Figure:
     draw_trend(trend_axis, result, strip)
     _write_title(drawn, result)
     _write_legend(next(iter(strip_axes.values())), result)
-    drawn.text(0.045, 0.012, FOOTER, fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, ha="left", va="bottom")
+    drawn.text(0.05, 0.012, FOOTER, fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, ha="left", va="bottom")
     version = f"caval {result.run.get('version', '')}".strip()
     drawn.text(0.985, 0.012, version, fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, ha="right", va="bottom")
     return drawn
@@ -61,7 +61,7 @@ def figure(result: Result) -> Figure:
 
 def _lay_out(drawn: Figure, roles: list[str]) -> tuple[dict[str, Axes], dict[str, Axes], Axes, Axes]:
     """Axes of the strip by role, of the median beat by role, of the numbers, and of the trend."""
-    rows = drawn.add_gridspec(2, 1, height_ratios=[2.55, 1.0], left=0.055, right=0.955, top=0.875, bottom=0.075, hspace=0.24)
+    rows = drawn.add_gridspec(2, 1, height_ratios=[2.55, 1.0], left=0.06, right=0.955, top=0.875, bottom=0.075, hspace=0.24)
     columns = rows[0].subgridspec(1, 2, width_ratios=[2.45, 1.0], wspace=0.14)
     stack = columns[0].subgridspec(len(roles), 1, height_ratios=[_HEIGHT[r] for r in roles], hspace=0.10)
     strip = {role: drawn.add_subplot(stack[i]) for i, role in enumerate(roles)}
@@ -81,17 +81,19 @@ def _write_title(drawn: Figure, result: Result) -> None:
         f"{len(beats)} beats, {int(beats['usable'].sum())} usable",
         f"{len(marks)} marks" + (f"  ({waves})" if waves else ""),
     ]
-    drawn.text(0.045, 0.972, result.recording.name, fontsize=15, fontweight="bold", color=_ink.INK, ha="left", va="top")
-    drawn.text(0.045, 0.938, "   ·   ".join(parts), fontsize=10, color=_ink.INK, ha="left", va="top")
+    drawn.text(0.05, 0.972, result.recording.name, fontsize=15, fontweight="bold", color=_ink.INK, ha="left", va="top")
+    drawn.text(0.05, 0.938, "   ·   ".join(parts), fontsize=10, color=_ink.INK, ha="left", va="top")
     if result.warnings:
         said = "; ".join(result.warnings)
         drawn.text(0.965, 0.972, _wrapped(said), fontsize=9, color="#8A4B08", ha="right", va="top", linespacing=1.35)
 
 
 def _wrapped(text: str, width: int = 95, most: int = 3) -> str:
+    """Up to `most` lines of about equal length."""
     from textwrap import wrap
 
-    lines = wrap(text, width)
+    rows = min(most, -(-len(text) // width))
+    lines = wrap(text, max(width * (rows == most), min(width, len(text) // max(rows, 1) + 12)))
     return "\n".join([*lines[: most - 1], lines[most - 1] + " …"] if len(lines) > most else lines)
 
 
@@ -107,6 +109,8 @@ def _write_legend(ax: Axes, result: Result) -> None:
             face = _ink.SOFT if state == "clear" else "white"
             size = 4.5 if state == "fused" else 6
             handles.append(Line2D([], [], marker="o", linestyle="", color=_ink.SOFT, markerfacecolor=face, markersize=size, label=text))
+    if "ecg" in result.roles and not set(result.beats["source"]) <= set(SEEN_ON_ECG):
+        handles.append(Line2D([], [], marker="v", linestyle="", color=_ink.SOFT, markerfacecolor="white", markersize=5, label="R by another trace"))
     if len(result.spans):
         handles.append(Patch(facecolor=_ink.SHADE, label="unusable"))
     if handles:

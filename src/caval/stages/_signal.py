@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage, signal
 
-__all__ = ["bandpass", "cut", "fill", "grid", "lowpass", "moving_mean", "refine", "runs"]
+from caval.recording import Signal
+
+__all__ = ["Thin", "bandpass", "cut", "fill", "grid", "lowpass", "moving_mean", "refine", "runs"]
 
 Floats = NDArray[np.float64]
 
@@ -71,3 +74,32 @@ def grid(start_s: float, stop_s: float, step_s: float) -> Iterator[tuple[float, 
     """Stretches of the fixed grid (lines at multiples of `step_s` from the start of the record) that ``[start_s, stop_s)`` touches."""
     for k in range(int(np.floor(start_s / step_s + 1e-9)), int(np.ceil(stop_s / step_s - 1e-9))):
         yield k * step_s, (k + 1) * step_s
+
+
+@dataclass(frozen=True)
+class Thin:
+    """Every `step`-th sample of a stretch, counted from the start of the record, so that the choice does not depend on the stretch."""
+
+    offset: int
+    step: int
+    length: int
+
+    @classmethod
+    def of(cls, stretch: Signal, every_s: float) -> Thin:
+        step = max(1, round(every_s * stretch.sampling_rate))
+        return cls(-round(stretch.start_s * stretch.sampling_rate) % step, step, len(stretch))
+
+    def take(self, values: NDArray) -> NDArray:
+        """The chosen samples; the first sample stands in when the stretch is shorter than a step."""
+        chosen = values[self.offset :: self.step]
+        return chosen if len(chosen) else values[:1]
+
+    def spread(self, chosen: NDArray) -> NDArray:
+        """A value of the chosen samples for every sample of the stretch: that of the last chosen one."""
+        index = (np.arange(self.length) - self.offset) // self.step
+        return chosen[np.clip(index, 0, len(chosen) - 1)]
+
+    def time_s(self, stretch: Signal) -> Floats:
+        """Times of the chosen samples, seconds of the record."""
+        count = max(1, -(-(self.length - self.offset) // self.step))
+        return stretch.start_s + (self.offset + self.step * np.arange(count)) / stretch.sampling_rate

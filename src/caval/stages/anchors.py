@@ -21,7 +21,7 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._signal import bandpass, cut, fill, grid, lowpass, moving_mean
+from caval.stages._signal import Thin, bandpass, cut, fill, grid, lowpass, moving_mean
 from caval.stages.detect import QRS_BAND_HZ
 
 __all__ = ["anchors"]
@@ -154,9 +154,9 @@ def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -
     energy = np.sqrt(moving_mean(band**2, round(0.09 * rate)))
     place = np.clip(np.rint(ecg.position(events)).astype(int), 0, len(values) - 1)
     loudness = ndimage.maximum_filter1d(energy, round(0.08 * rate) | 1)[place]
-    step = max(1, round(0.04 * rate))
-    background = ndimage.percentile_filter(energy[::step], 45, size=round(1.6 * rate / step) | 1)
-    background_at_s = ecg.start_s + np.arange(len(background)) * step / rate
+    thin = Thin.of(ecg, 0.04)
+    background = ndimage.percentile_filter(thin.take(energy), 45, size=round(1.6 * rate / thin.step) | 1)
+    background_at_s = thin.time_s(ecg)
     half = round(_HALF_PICTURE_S * rate)
     shapes = cut(band, place - half, 2 * half + 1)
     norms = np.sqrt((shapes**2).sum(axis=1)) + 1e-12
@@ -177,8 +177,8 @@ def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -
         usual_at.append(usual)
     ratio = background / np.maximum(np.interp(background_at_s, minutes, usual_at), 1e-12)
     quiet_level = np.clip((0.45 - ratio) / 0.30, 0.0, 1.0)
-    quiet_level[missing[::step]] = 0.0
-    quiet = quiet_level[np.clip(place // step, 0, len(quiet_level) - 1)]
+    quiet_level[thin.take(missing)] = 0.0
+    quiet = thin.spread(quiet_level)[place]
     return _Evidence(size, likeness, quiet, background_at_s, quiet_level, np.array(minutes), np.array(transits), np.array(spreads))
 
 

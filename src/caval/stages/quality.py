@@ -10,7 +10,7 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._signal import fill, lowpass, moving_mean, runs
+from caval.stages._signal import Thin, fill, lowpass, moving_mean, runs
 
 __all__ = ["quality"]
 
@@ -68,7 +68,7 @@ def quality(
         _add(found, signal, _clipped(values, signal.sampling_rate) & ~missing & ~still, "clipped", "stands at the recorder's limit")
         if role == "cvp":
             blank = missing | still
-            _add(found, signal, _climbing(values, signal.sampling_rate, climb_mmhg) & ~blank, "implausible", "the level climbs or falls without a turn")
+            _add(found, signal, _climbing(values, signal, climb_mmhg) & ~blank, "implausible", "the level climbs or falls without a turn")
             _add(found, signal, _moved(values, blank, signal, movement), "noise", f"range above {movement:g} times the usual")
     return pd.concat(found, ignore_index=True) if found else tables.empty("spans")
 
@@ -131,39 +131,39 @@ def _clipped(values: Floats, rate: float) -> Mask:
     return clipped
 
 
-def _climbing(values: Floats, rate: float, climb_mmhg: float) -> Mask:
+def _climbing(values: Floats, signal: Signal, climb_mmhg: float) -> Mask:
     """Where the level goes one way for six seconds and by more than `climb_mmhg`."""
-    step = max(1, round(0.25 * rate))
-    level = moving_mean(values, round(_SMOOTH_S * rate))[::step]
-    reach = round(3.0 / (step / rate))
+    thin = Thin.of(signal, 0.25)
+    level = thin.take(moving_mean(values, round(_SMOOTH_S * signal.sampling_rate)))
+    reach = round(3.0 * signal.sampling_rate / thin.step)
     if len(level) <= 2 * reach + 2:
         return np.zeros(len(values), dtype=bool)
     move = np.diff(level, prepend=level[0])
-    change = np.convolve(move, np.ones(2 * reach + 1), "same")
-    path = np.convolve(np.abs(move), np.ones(2 * reach + 1), "same")
-    return _spread(_widen((np.abs(change) > climb_mmhg) & (np.abs(change) > 0.9 * path), reach), step, len(values))
+    change = _moving_sum(move, reach)
+    climbing = (np.abs(change) > climb_mmhg) & (np.abs(change) > 0.9 * _moving_sum(np.abs(move), reach))
+    near = _moving_sum(move, reach // 3)  # over two seconds: where the climb itself is, not what lies around it
+    one_way = np.sign(near) == np.sign(ndimage.median_filter(change, 2 * reach + 1, mode="nearest"))
+    climbing = _widen(climbing, reach) & (np.abs(near) > climb_mmhg / 8.0) & one_way
+    return thin.spread(_widen(climbing, 2))
 
 
-def _spread(mask: Mask, step: int, length: int) -> Mask:
-    """A mask of every `step`-th sample over all samples."""
-    return mask[np.minimum(np.arange(length) // step, len(mask) - 1)]
+def _moving_sum(values: Floats, reach: int) -> Floats:
+    return np.convolve(values, np.ones(2 * reach + 1), "same")
 
 
 def _moved(values: Floats, blank: Mask, signal: Signal, movement: float) -> Mask:
     """Where the venous trace ranges much wider than it does around, and no less than 4 mmHg beyond it."""
-    rate = signal.sampling_rate
-    smooth = lowpass(values, rate, 20.0)
-    step = max(1, round(0.1 * rate))
-    width = round(1.2 * rate) | 1
-    span = (ndimage.maximum_filter1d(smooth, width) - ndimage.minimum_filter1d(smooth, width))[::step]
-    usual = _local_median(span, ~blank[::step], signal.start_s, step / rate)
-    return _spread((span > movement * usual) & (span > usual + 4.0), step, len(values))
+    thin = Thin.of(signal, 0.1)
+    smooth = lowpass(values, signal.sampling_rate, 20.0)
+    width = round(1.2 * signal.sampling_rate) | 1
+    span = thin.take(ndimage.maximum_filter1d(smooth, width) - ndimage.minimum_filter1d(smooth, width))
+    usual = _local_median(span, ~thin.take(blank), thin.time_s(signal))
+    return thin.spread((span > movement * usual) & (span > usual + 4.0))
 
 
-def _local_median(level: Floats, good: Mask, start_s: float, step_s: float) -> Floats:
+def _local_median(level: Floats, good: Mask, time: Floats) -> Floats:
     """Median of the good values within a minute either way, learned on the fixed grid of quarter minutes, straight lines between."""
-    time = start_s + np.arange(len(level)) * step_s
-    knots = np.arange(np.floor(start_s / 15.0), np.ceil(time[-1] / 15.0) + 1) * 15.0
+    knots = np.arange(np.floor(time[0] / 15.0), np.ceil(time[-1] / 15.0) + 1) * 15.0
     medians = np.full(len(knots), np.nan)
     for i, knot in enumerate(knots):
         near = slice(*np.searchsorted(time, [knot - _NEIGHBOURS_S, knot + _NEIGHBOURS_S]))

@@ -27,6 +27,8 @@ Floats = NDArray[np.float64]
 
 _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.070}
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
+_FARTHEST_S = 75.0
+"""A picture farther than this from a beat says nothing about it."""
 _PROMINENCE_WINDOW_S = 0.5
 _WEAK_MMHG = 0.12
 """An extremum lower than this, or than twice the noise, is weak."""
@@ -112,10 +114,10 @@ class _Found:
         self.r = beats["r_time_s"].to_numpy(float)
         self.beat = beats["beat"].to_numpy(np.int64)
         self.stop = beat_stops(self.r)
-        self.usable = usable
         self.pictures = pictures
-        centres = np.array([p.centre_s for p in pictures])
-        self.which = np.abs(self.r[:, None] - centres).argmin(axis=1)
+        away = np.abs(self.r[:, None] - np.array([p.centre_s for p in pictures]))
+        self.which = away.argmin(axis=1)
+        self.usable = usable & (away.min(axis=1) <= _FARTHEST_S)
         self.noise = np.array([p.noise_mmhg for p in pictures])[self.which]
         self.span = np.array([p.span_mmhg for p in pictures])[self.which]
         self.time: dict[str, Floats] = {}
