@@ -99,7 +99,7 @@ def test_impossible_channels_and_stretches_are_refused() -> None:
         with pytest.raises(InputError, match="above 0"):
             channel(np.ones(3), rate)
     with pytest.raises(InputError, match="negative"):
-        Channel("CVP", "mmHg", 1.0, -1, lambda start, stop: np.empty(0))
+        Channel("CVP", "mmHg", 1.0, -1, lambda *_: np.empty(0))
     with pytest.raises(InputError, match="samples 2 to 20 asked of 10"):
         channel(np.ones(10)).digital(2, 20)
     with pytest.raises(InputError, match=r"shape \(2, 2\)"):

@@ -69,7 +69,8 @@ def test_a_broken_plugin_warns_and_is_skipped(install: Any, failure: Exception) 
 
 
 def test_a_hidden_duplicate_warns_and_ours_stays(install: Any) -> None:
-    install(Entry("waves", "theirs:waves", Package("theirs"), "theirs"), Entry("waves", "caval.stages.waves:waves", Package("caval"), "ours"))
+    ours = Entry("waves", "caval.stages.waves:waves", Package("caval"), "ours")
+    install(Entry("waves", "theirs:waves", Package("theirs"), "theirs"), ours)
     with pytest.warns(UserWarning, match="'waves' of theirs is hidden by that of caval"):
         found = registry.stages()
     assert found["waves"].value == "ours"
@@ -100,7 +101,7 @@ def test_format_by_ending_then_by_asking(install: Any, tmp_path: Path) -> None:
     (tmp_path / "x.xyz").touch()
     with pytest.raises(FileError, match=r"'.xyz' is not one that caval can read; it can: .one, .two"):
         registry.format_for(tmp_path / "x.xyz")
-    with pytest.raises(FileError, match="can write; it can: .out"):
+    with pytest.raises(FileError, match=r"can write; it can: \.out"):
         registry.format_for(tmp_path / "x.one", "write")
 
 

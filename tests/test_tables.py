@@ -42,10 +42,10 @@ def test_beats_do_not_depend_on_the_cut(edges: list[float], margin_s: float) -> 
     np.testing.assert_allclose(joined["rr_s"].to_numpy()[1:], 0.83)
 
 
-@given(
-    cuts, st.floats(0, 30),
-    st.lists(st.tuples(st.floats(0, 90), st.floats(0.1, 10), st.sampled_from(["flat", "noise"]), st.sampled_from(["CVP", "II"])), max_size=8),
-)
+span_rows = st.tuples(st.floats(0, 90), st.floats(0.1, 10), st.sampled_from(["flat", "noise"]), st.sampled_from(["CVP", "II"]))
+
+
+@given(cuts, st.floats(0, 30), st.lists(span_rows, max_size=8))
 def test_spans_do_not_depend_on_the_cut(edges: list[float], margin_s: float, rows: list[tuple[float, float, str, str]]) -> None:
     spans = pd.DataFrame([(*row, "") for row in rows], columns=list(tables.SCHEMAS["spans"])).astype(tables.SCHEMAS["spans"])
     whole = tables.join_blocks("spans", [(0.0, END_S, spans)])

@@ -60,7 +60,8 @@ def test_columns_of_different_lengths_are_refused() -> None:
 
 def test_our_tables_become_a_track_and_come_back() -> None:
     marks = pd.DataFrame({"time_s": np.arange(len(WAVES)) / 10, "mark": list(WAVES)})
-    spans = pd.DataFrame([(0.2, 0.3, "flat", "P2", ""), (5.0, 1.0, "noise", "II", ""), (7.0, 1.0, "gap", "X9", "")], columns=list(tables.SCHEMAS["spans"]))
+    rows = [(0.2, 0.3, "flat", "P2", ""), (5.0, 1.0, "noise", "II", ""), (7.0, 1.0, "gap", "X9", "")]
+    spans = pd.DataFrame(rows, columns=list(tables.SCHEMAS["spans"]))
     track = Track.from_tables(marks, spans, channels={"II": 0, "P2": 1}, roles={"cvp": "P2", "ecg": "II"})
     assert {"BAD_CVP/flat", "BAD_ECG/noise", "BAD_X9/gap"} <= set(track.texts)
     pd.testing.assert_frame_equal(track.marks().astype({"mark": object}), marks.astype({"mark": object}))

@@ -24,7 +24,10 @@ def test_a_span_reads_back_and_bad_says_unusable(kind: str, role: str) -> None:
     assert text.startswith("BAD_") == SPANS[kind].unusable  # what MNE looks for
 
 
-@pytest.mark.parametrize("text", ["", "a", "x", "N", "CVP", "CVP/", "CVP/q", "cvp/a", "ABP/a", "BAD_CVP/a", "Lights off", "CVP/a begin", "/"])
+OTHERS = ["", "a", "x", "N", "CVP", "CVP/", "CVP/q", "cvp/a", "ABP/a", "BAD_CVP/a", "Lights off", "CVP/a begin", "/"]
+
+
+@pytest.mark.parametrize("text", OTHERS)
 def test_other_peoples_texts_are_left_alone(text: str) -> None:
     assert parse_text(text) is None
 

@@ -70,6 +70,9 @@ def annotate_cvp(
             |------ first_time ------|-------- time_s ----------|
             |------------------- onset -------------------------|       (without meas_date: onset = time_s)
 
+    MNE's EDF reader brings the slower channels of a file to the fastest rate by Fourier interpolation, which leaves a ripple on what was
+    flat or cut off. ``RawCaval(caval.read("record.edf"))`` keeps the recorded samples and joins them by straight lines.
+
     Examples
     --------
     >>> import caval, mne
@@ -77,7 +80,7 @@ def annotate_cvp(
     >>> raw = RawCaval(caval.demo_recording(minutes=0.5), verbose="ERROR")
     >>> raw = raw.set_annotations(annotate_cvp(raw, verbose="ERROR"))
     >>> events, event_id = mne.events_from_annotations(raw, regexp="^CVP/", verbose="ERROR")
-    >>> epochs = mne.Epochs(raw, events, event_id, tmin=-0.2, tmax=0.3, baseline=None, picks=["CVP"], verbose="ERROR")
+    >>> epochs = mne.Epochs(raw, events, event_id, tmin=-0.2, tmax=0.3, baseline=None, picks=["CVP"], preload=True, verbose="ERROR")
     >>> sorted(epochs.event_id)[:2], len(epochs["a"]) > 25
     (['CVP/a', 'CVP/c'], True)
     """

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC
 from pathlib import Path
 from typing import Any
@@ -92,7 +92,7 @@ class RawCaval(mne.io.BaseRaw):
 
 @dataclass(frozen=True, eq=False)
 class _Stored:
-    """The channels on the clock of the Raw. A copy of a Raw shares them."""
+    """The channels on the clock of the Raw. A copy of a Raw shares them; a pickled one has only what was loaded."""
 
     channels: tuple[Channel, ...]
     scales: tuple[float, ...]
@@ -100,6 +100,9 @@ class _Stored:
 
     def __deepcopy__(self, memo: dict[int, Any]) -> _Stored:
         return self
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return _Stored, (tuple(replace(c, source=_left_behind) for c in self.channels), self.scales, self.sfreq)
 
     @property
     def n_times(self) -> int:
@@ -109,6 +112,10 @@ class _Stored:
         """Samples ``[start, stop)`` of the channels `idx`, shape (channels, stop - start), in the Raw's units."""
         chosen = np.arange(len(self.channels))[idx]
         return np.stack([_on_clock(self.channels[i], self.sfreq, start, stop) * self.scales[i] for i in chosen])
+
+
+def _left_behind(start: int, stop: int) -> NDArray:
+    raise FileError(f"samples {start} to {stop} were not loaded before the Raw was pickled; call raw.load_data() first")
 
 
 def _on_clock(channel: Channel, sfreq: float, start: int, stop: int) -> NDArray[np.float64]:

@@ -43,7 +43,8 @@ def run(
     beats = None if r_samples is None else r_samples / sampling_rate
     result = mark(Recording.from_arrays(arrays), roles={label.lower(): label for label in arrays}, beats=beats)
     if not len(result.marks):
-        warnings.warn(f"caval warning: {function}(): {'; '.join(result.warnings) or 'no marks'}", stacklevel=3)
+        step = "" if len(result.beats) else ". Give 'rpeaks', or to cvp_process() an 'ecg_signal'"
+        warnings.warn(f"caval warning: {function}(): {'; '.join(result.warnings) or 'no marks'}{step}", stacklevel=3)
     return result
 
 

@@ -177,4 +177,4 @@ def _some(texts: Sequence[str], most: int = 8) -> str:
 
 
 def _percent(share: float) -> str:
-    return "" if share == 0 else "< 1 %" if share < 0.01 else f"{share * 100:.0f} %"
+    return "none" if share == 0 else "< 1 %" if share < 0.01 else f"{share * 100:.0f} %"

@@ -226,6 +226,10 @@ def convert(
     try:
         recording = api.read(source)
         api.write(recording, scratch / target.name)
+        for name in sorted(path.name for path in scratch.iterdir()):
+            there = target.parent / name
+            if there.exists() and not force and not (recording.path and there.samefile(recording.path)):
+                raise FileError(f"{there} exists; use --force to overwrite, or give another name")
         written = _move_all(scratch, target.parent, force=force, keep=recording.path)
     finally:
         shutil.rmtree(scratch, ignore_errors=True)

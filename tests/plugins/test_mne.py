@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import pickle
 import warnings
 from dataclasses import replace
 from datetime import UTC, datetime
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -74,7 +76,7 @@ def test_values_between_recorded_samples_lie_on_straight_lines_and_the_last_is_h
 def test_a_sample_is_the_same_in_whatever_stretch_it_is_read(drawn, raw):
     lazy = RawCaval(replace(drawn.recording, start_time=START), **QUIET)
     edges = [0, 1, 1001, 7777, 20_003, lazy.n_times]
-    pieces = [lazy[:, a:b][0] for a, b in zip(edges, edges[1:], strict=False)]
+    pieces = [lazy[:, a:b][0] for a, b in pairwise(edges)]
     np.testing.assert_array_equal(np.hstack(pieces), raw.get_data())
     np.testing.assert_array_equal(lazy.copy().crop(10, 20).get_data(["ABP", "ECG II"]), raw.get_data(["ABP", "ECG II"], 5000, 10_001))
 
@@ -88,15 +90,16 @@ def test_rate_takes_the_channels_of_one_rate_as_recorded(drawn):
 
 
 def test_pressures_in_other_units_become_mmhg_and_ecg_volts():
-    arrays = {"CVP": ([10.0, 20.0], 100.0, "cmH2O"), "II": ([500.0, 1.0], 100.0, "µV"), "Resp": ([1.0, 2.0], 100.0, "Ohm"), "X": ([3.0, 4.0], 100.0, "")}
-    raw = RawCaval(Recording.from_arrays(arrays), **QUIET)
+    units = {"CVP": (10.0, "cmH2O"), "II": (500.0, "µV"), "Resp": (1.0, "Ohm"), "X": (3.0, "")}
+    raw = RawCaval(Recording.from_arrays({k: ([value, value], 100.0, unit) for k, (value, unit) in units.items()}), **QUIET)
     assert raw.get_channel_types() == ["misc", "ecg", "resp", "misc"]
     # 1 cmH2O = 0.735559 mmHg
     np.testing.assert_allclose(raw.get_data()[:, 0], [7.35559, 500e-6, 1.0, 3.0], rtol=1e-6)
 
 
 def test_gaps_are_nan_and_annotated():
-    recording = Recording.from_arrays({"ECG": (np.ones(1000), 100.0, "mV"), "CVP": (np.ones(1000), 100.0, "mmHg"), "ABP": (np.ones(1000), 100.0, "mmHg")})
+    units = {"ECG": "mV", "CVP": "mmHg", "ABP": "mmHg"}
+    recording = Recording.from_arrays({label: (np.ones(1000), 100.0, unit) for label, unit in units.items()})
     both = np.array([[200, 300]])
     gaps = {"ECG": both, "CVP": np.array([[200, 300], [500, 550]]), "ABP": both}
     recording = replace(recording, channels=tuple(replace(c, gaps=gaps[c.label]) for c in recording.channels))
@@ -131,6 +134,21 @@ def test_a_copy_of_a_lazy_raw_shares_the_stored_channels(drawn):
     assert lazy.copy()._raw_extras[0]["stored"] is lazy._raw_extras[0]["stored"]
 
 
+def test_a_loaded_raw_survives_pickling_and_a_lazy_one_says_what_is_missing(raw, drawn):
+    np.testing.assert_array_equal(pickle.loads(pickle.dumps(raw)).get_data(), raw.get_data())
+    lazy = pickle.loads(pickle.dumps(RawCaval(drawn.recording, **QUIET)))
+    with pytest.raises(CavalError, match="load_data"):
+        lazy.get_data()
+
+
+def test_filtering_goes_around_a_gap_of_all_channels(drawn):
+    channels = tuple(replace(c, gaps=np.array([[10, 15]]) * int(c.sampling_rate)) for c in drawn.recording.channels)
+    raw = RawCaval(replace(drawn.recording, channels=channels), preload=True, **QUIET)
+    ecg = raw.filter(0.5, 40, picks=["ECG II"], **QUIET).get_data("ECG II")[0]
+    assert np.isnan(ecg[5000:7500]).all()
+    assert np.isfinite(ecg).sum() == len(ecg) - 2500
+
+
 @pytest.mark.skipif("wfdb" not in registry.formats(), reason="the WFDB converter is not installed")
 def test_read_raw_wfdb_of_a_record_that_wfdb_wrote(tmp_path, drawn):
     import wfdb
@@ -138,12 +156,13 @@ def test_read_raw_wfdb_of_a_record_that_wfdb_wrote(tmp_path, drawn):
     ecg = drawn.recording.channel("ECG II").digital()[:5000]
     cvp = np.repeat(drawn.recording.channel("CVP").digital()[:1250], 4)
     wfdb.wrsamp(
-        "rec", fs=500, units=["mV", "mmHg"], sig_name=["II", "CVP"], d_signal=np.column_stack([ecg, cvp]).astype(np.int64), fmt=["16", "16"],
-        adc_gain=[1000.0, 100.0], baseline=[0, 0], base_time=START.time(), base_date=START.date(), write_dir=str(tmp_path),
+        "rec", fs=500, units=["mV", "mmHg"], sig_name=["II", "CVP"], d_signal=np.column_stack([ecg, cvp]).astype(np.int64),
+        fmt=["16", "16"], adc_gain=[1000.0, 100.0], baseline=[0, 0], base_time=START.time(), base_date=START.date(),
+        write_dir=str(tmp_path),
     )
     raw = read_raw_wfdb(tmp_path / "rec.hea", preload=True, **QUIET)
     assert raw.get_channel_types() == ["ecg", "misc"]
-    assert raw.info["meas_date"] == START.replace(tzinfo=UTC, microsecond=654_000)  # the header has milliseconds
+    assert raw.info["meas_date"] == START.replace(tzinfo=UTC)  # to the microsecond, as in the header
     np.testing.assert_allclose(raw.get_data()[0], ecg * 1e-6, rtol=0, atol=1e-12)
     np.testing.assert_allclose(raw.get_data()[1], cvp / 100.0, rtol=0, atol=1e-9)
     with pytest.raises(CavalError, match="nowhere"):

@@ -7,6 +7,7 @@ The circulation model replaces it where waves must come out of volumes and compl
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -50,6 +51,7 @@ def sketch(
     noise_mmhg: float = 0.05,
     ecg_rate: float = 500.0,
     pressure_rate: float = 125.0,
+    heights: Mapping[str, float] | None = None,
     events: bool = True,
     seed: int = 1,
 ) -> Sketch:
@@ -61,6 +63,8 @@ def sketch(
         The scene; `breath_s` is the length of a ventilator cycle and `swing_mmhg` what it adds at its height.
     ecg_rate, pressure_rate : float
         Hz.
+    heights : mapping of str to float, optional
+        Height of a wave's bump in mmHg where it is to differ from the usual: ``{"a": 0.0}`` draws an atrium that does not contract.
     events : bool
         With diathermy on the ECG, a flush of the venous line and a short clotted stretch, where the record is long enough.
     seed : int
@@ -69,8 +73,11 @@ def sketch(
     Raises
     ------
     InputError
-        A length, rate or heart rate that is not above 0.
+        A length, rate or heart rate that is not above 0; a wave that is not drawn.
     """
+    for wave in heights or {}:
+        if wave not in _BUMPS:
+            raise InputError(f"heights: no wave {wave!r}; waves are: {', '.join(_BUMPS)}")
     for name, value in (("minutes", minutes), ("heart_rate", heart_rate), ("ecg_rate", ecg_rate), ("pressure_rate", pressure_rate)):
         if not value > 0:
             raise InputError(f"{name} = {value!r}: it must be above 0")
@@ -88,10 +95,12 @@ def sketch(
     time = np.arange(round(duration_s * pressure_rate)) / pressure_rate
     breath = mean_mmhg + swing_mmhg * np.clip(np.sin(2 * np.pi * time / breath_s), 0, None) ** 0.7
     cvp = np.zeros_like(time)
-    for fixed, share, height, width in _BUMPS.values():
+    narrow = min(1.0, 1.25 * 60.0 / heart_rate)  # in tachycardia the waves are shorter, or they would run into one another
+    bumps = {w: (fixed, share, (heights or {}).get(w, height), narrow * width) for w, (fixed, share, height, width) in _BUMPS.items()}
+    for fixed, share, height, width in bumps.values():
         cvp += _draw(time, r + fixed + share * (interval - 0.3), height, width)
     cvp += breath
-    marks = _truth(time, cvp, r, interval)
+    marks = _truth(time, cvp, r, interval, bumps)
     cvp = cvp + noise_mmhg * rng.standard_normal(len(time))
 
     abp = 62.0 + _pulse(time, r + 0.18, interval) + 2.0 * np.sin(2 * np.pi * time / breath_s) + 0.3 * rng.standard_normal(len(time))
@@ -140,16 +149,18 @@ def _pulse(time: NDArray, onset: NDArray, interval: NDArray) -> NDArray[np.float
     return np.where(time < onset[0], 0.0, height * rise * np.clip(run_off, 0, None) - notch)
 
 
-def _truth(time: NDArray, clean: NDArray, r: NDArray, interval: NDArray) -> pd.DataFrame:
+def _truth(
+    time: NDArray, clean: NDArray, r: NDArray, interval: NDArray, bumps: Mapping[str, tuple[float, float, float, float]]
+) -> pd.DataFrame:
     """Extrema of the noise-free trace nearest each bump, no farther than 60 ms; a bump without one is left out (fused)."""
     step = time[1] - time[0] if len(time) > 1 else 1.0
     rising = np.diff(clean) > 0
     peaks = np.flatnonzero(rising[:-1] & ~rising[1:]) + 1
     troughs = np.flatnonzero(~rising[:-1] & rising[1:]) + 1
     rows = []
-    for wave, (fixed, share, height, _) in _BUMPS.items():
+    for wave, (fixed, share, height, _) in bumps.items():
         extrema = peaks if height > 0 else troughs
-        if not len(extrema):
+        if height == 0 or not len(extrema):
             continue
         place = r + fixed + share * (interval - 0.3)
         near = extrema[np.clip(np.searchsorted(extrema, place / step), 1, len(extrema) - 1)[:, None] + np.array([-1, 0])]

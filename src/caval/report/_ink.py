@@ -159,7 +159,7 @@ def draw_mark(ax: Axes, wave: str, state: str, time: NDArray, value: NDArray, *,
 
 
 def letters(ax: Axes, items: Sequence[tuple[float, float, str]], *, points: float = LETTER_PT) -> None:
-    """Write the letter of each ``(x, y, wave)`` above peaks and below nadirs, farther out where two would touch; after the limits are set."""
+    """Write the letter of each ``(x, y, wave)`` above peaks and below nadirs, farther out where two would touch. Set the limits first."""
     from matplotlib.patheffects import withStroke
 
     halo = [withStroke(linewidth=2.2, foreground="white")]

@@ -29,27 +29,27 @@ _LEAD_S = 0.35
 def choose_strip(result: Result, length_s: float = STRIP_S) -> tuple[float, float]:
     """Start and stop (s) of the strip to show.
 
-    Of the stretches that start just before a usable beat, those with nearly as many clear marks a beat as the best are kept, so that
-    there is something to see; of these the one that is most like the whole record (interval, pressure, place in time) is taken, so that
-    it is not merely the prettiest. Without marks: the middle of the analysed stretch that is not shaded, if there is one.
+    Of the stretches that start just before a usable beat, those with nearly as many sure marks a beat as the best are kept, so that
+    there is something to see; of these the one that is most like the whole record (interval, levels, unrest, place in time) is taken, so
+    that it is not merely the prettiest. Without marks: the middle of the analysed stretch that is not shaded, if there is one.
     """
     first, last = _analysed(result)
     length_s = min(length_s, last - first)
     latest = last - length_s
     usable = result.beats[result.beats["usable"].to_numpy(bool)]
-    clear = np.sort(result.marks.loc[result.marks["state"] == "clear", "time_s"].to_numpy(float))
-    starts = np.clip(usable["r_time_s"].to_numpy(float) - _LEAD_S, first, latest)
+    r = usable["r_time_s"].to_numpy(float)
+    starts = np.clip(r - _LEAD_S, first, latest)
     if not len(starts) or not len(result.marks):
         starts = np.linspace(first, latest, 200)
-    r = result.beats["r_time_s"].to_numpy(float)
-    beats = _count(r, starts, length_s)
-    marks_a_beat = _count(clear, starts, length_s) / np.maximum(beats, 1)
-    shaded = _shaded_share(result, starts, length_s)
-    worth = marks_a_beat - 60.0 * shaded
-    kept = worth >= worth.max() - 0.1 * max(marks_a_beat.max(), 0.1)
-    unlike = _unlike(usable["r_time_s"].to_numpy(float), usable["rr_s"].to_numpy(float), starts, length_s)
-    unlike += _unlike(usable["r_time_s"].to_numpy(float), usable["mean_mmhg"].to_numpy(float), starts, length_s)
-    unlike += np.abs(starts + length_s / 2 - (first + last) / 2) / (last - first)
+    # h is left out: where the trace is restless, small waves between y and a look like one.
+    sure = result.marks[(result.marks["state"] == "clear") & (result.marks["mark"] != "h")]
+    total, _, _ = _moments(sure["time_s"].to_numpy(float), sure["confidence"].to_numpy(float), starts, length_s)
+    _, _, beats = _moments(result.beats["r_time_s"].to_numpy(float), np.ones(len(result.beats)), starts, length_s)
+    worth = total / np.maximum(beats, 1) - 60.0 * _shaded_share(result, starts, length_s)
+    kept = worth >= worth.max() - 0.15 * max(float((total / np.maximum(beats, 1)).max()), 0.1)
+    unlike = np.abs(starts + length_s / 2 - (first + last) / 2) / (last - first)
+    for column in ("rr_s", "mean_mmhg", "a_mmhg", "x_mmhg", "v_mmhg"):
+        unlike += _unlike(r, usable[column].to_numpy(float), starts, length_s)
     best = float(starts[np.where(kept, unlike, np.inf).argmin()])
     return best, best + length_s
 
@@ -62,9 +62,12 @@ def _analysed(result: Result) -> tuple[float, float]:
     return (first, last) if last > first else (0.0, max(result.recording.duration_s, 1.0))
 
 
-def _count(times: NDArray, starts: NDArray, length_s: float) -> NDArray[np.int64]:
-    times = np.sort(times)
-    return np.searchsorted(times, starts + length_s) - np.searchsorted(times, starts)
+def _moments(time: NDArray, value: NDArray, starts: NDArray, length_s: float) -> tuple[NDArray, NDArray, NDArray]:
+    """Sum, sum of squares and number of the values in each stretch; `time` in order."""
+    cuts = np.searchsorted(time, starts), np.searchsorted(time, starts + length_s)
+    sums = (np.r_[0.0, np.cumsum(v)] for v in (value, value**2))
+    first, second = (s[cuts[1]] - s[cuts[0]] for s in sums)
+    return first, second, cuts[1] - cuts[0]
 
 
 def _shaded_share(result: Result, starts: NDArray, length_s: float) -> NDArray[np.float64]:
@@ -77,16 +80,20 @@ def _shaded_share(result: Result, starts: NDArray, length_s: float) -> NDArray[n
 
 
 def _unlike(time: NDArray, value: NDArray, starts: NDArray, length_s: float) -> NDArray[np.float64]:
-    """How far the mean of `value` in each stretch lies from the record's median, in quartile ranges; 0 where nothing is known."""
+    """How unlike the record each stretch is: its mean's distance from the median, in quartile ranges, and its spread beyond the usual.
+
+    0 where nothing is known, 1 for a stretch without a value.
+    """
     known = np.isfinite(value)
     time, value = time[known], value[known]
     if len(value) < 4:
         return np.zeros(len(starts))
-    total = np.r_[0.0, np.cumsum(value)]
-    low, high = np.searchsorted(time, starts), np.searchsorted(time, starts + length_s)
-    mean = (total[high] - total[low]) / np.maximum(high - low, 1)
-    quartiles = np.percentile(value, [25, 50, 75])
-    return np.where(high > low, np.abs(mean - quartiles[1]) / max(quartiles[2] - quartiles[0], 1e-3), 1.0)
+    low, middle, high = np.percentile(value, [25, 50, 75])
+    first, second, n = _moments(time, value - middle, starts, length_s)
+    mean = first / np.maximum(n, 1)
+    spread = np.sqrt(np.maximum(second / np.maximum(n, 1) - mean**2, 0.0))
+    usual = float(np.median(spread[n > 2])) if (n > 2).any() else 0.0
+    return np.where(n > 0, np.abs(mean) / max(high - low, 1e-3) + np.maximum(spread - usual, 0.0) / max(usual, 1e-3), 1.0)
 
 
 def draw_strip(axes: dict[str, Axes], result: Result, stretch: tuple[float, float]) -> None:

@@ -52,7 +52,7 @@ def figure(result: Result) -> Figure:
     draw_readings(readings_axis, result)
     draw_trend(trend_axis, result, strip)
     _write_title(drawn, result)
-    _write_legend(next(iter(strip_axes.values())), result)
+    _write_legend(next(iter(strip_axes.values())), result, strip)
     drawn.text(0.05, 0.012, FOOTER, fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, ha="left", va="bottom")
     version = f"caval {result.run.get('version', '')}".strip()
     drawn.text(0.985, 0.012, version, fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, ha="right", va="bottom")
@@ -97,20 +97,22 @@ def _wrapped(text: str, width: int = 95, most: int = 3) -> str:
     return "\n".join([*lines[: most - 1], lines[most - 1] + " …"] if len(lines) > most else lines)
 
 
-def _write_legend(ax: Axes, result: Result) -> None:
-    """What filled, open and hatched marks mean; only those that occur."""
+def _write_legend(ax: Axes, result: Result, strip: tuple[float, float]) -> None:
+    """What filled, open and hatched marks mean; only those that occur in the strip."""
     from matplotlib.lines import Line2D
     from matplotlib.patches import Patch
 
-    states = set(result.marks["state"])
+    states = set(result.marks.loc[result.marks["time_s"].between(*strip), "state"])
+    sources = set(result.beats.loc[result.beats["r_time_s"].between(*strip), "source"])
     handles: list[Line2D | Patch] = []
     for state, text in _LEGEND:
         if state in states:
             face = _ink.SOFT if state == "clear" else "white"
             size = 4.5 if state == "fused" else 6
             handles.append(Line2D([], [], marker="o", linestyle="", color=_ink.SOFT, markerfacecolor=face, markersize=size, label=text))
-    if "ecg" in result.roles and not set(result.beats["source"]) <= set(SEEN_ON_ECG):
-        handles.append(Line2D([], [], marker="v", linestyle="", color=_ink.SOFT, markerfacecolor="white", markersize=5, label="R by another trace"))
+    if "ecg" in result.roles and not sources <= set(SEEN_ON_ECG):
+        label = "R by another trace"
+        handles.append(Line2D([], [], marker="v", linestyle="", color=_ink.SOFT, markerfacecolor="white", markersize=5, label=label))
     if len(result.spans):
         handles.append(Patch(facecolor=_ink.SHADE, label="unusable"))
     if handles:

@@ -78,13 +78,18 @@ def running_pictures(smooth: Signal, beats: pd.DataFrame, usable: NDArray[np.boo
 def _picture(centre_s: float, grid_s: Floats, traces: Floats, interval_s: float) -> Picture:
     seen = np.isfinite(traces).sum(axis=0) >= max(3, 0.5 * len(traces))
     inside = seen & (grid_s < max(interval_s - 0.02, 0.3))
-    median = np.nanmedian(traces[:, inside], axis=0)
+    median = _median(traces[:, inside], 0)
     time = grid_s[inside]
     rest = traces[:, inside] - median
     lag = round(0.04 / STEP_S)
-    noise = 1.4826 * float(np.nanmedian(np.abs(rest[:, lag:] - rest[:, :-lag]))) / np.sqrt(2.0)
+    noise = 1.4826 * float(_median(np.abs(rest[:, lag:] - rest[:, :-lag]))) / np.sqrt(2.0)
     span = float(np.ptp(median)) or 1e-9
     return Picture(centre_s, time, median, interval_s, span, noise, _places(time, median, interval_s, span, noise / np.sqrt(len(traces))))
+
+
+def _median(values: Floats, axis: int | None = None) -> Floats:
+    """Median without the missing values; the plain one, several times faster, where none is missing."""
+    return np.nanmedian(values, axis=axis) if np.isnan(values).any() else np.median(values, axis=axis)
 
 
 def _places(time: Floats, trace: Floats, interval: float, span: float, noise: float) -> dict[str, float]:
@@ -104,7 +109,8 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
             score = 1.5 * (trace[v] - 2 * trace[x]) / span - _off(time[x], 0.235, 0.07) - _off(time[v], v_usual, 0.08)
             if score > best:
                 best, places["x"], places["v"] = score, time[x], time[v]
-    a = _best(peaks, time, trace, span, (-0.28, min(0.06, places.get("x", 0.2) - 0.10)), -0.06, 0.08, 2.0)
+    tall = _prominent(trace, 1.0, max(0.06 * span, 4.0 * noise))  # an atrium that does not contract must not get an a from noise
+    a = _best(tall, time, trace, span, (-0.28, min(0.06, places.get("x", 0.2) - 0.10)), -0.06, 0.08, 2.0)
     if a is not None:
         places["a"] = a
     if "v" in places:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,19 +28,23 @@ def fill(values: Floats) -> tuple[Floats, NDArray[np.bool_]]:
     return np.interp(index, index[~missing], values[~missing]), missing
 
 
+@cache
+def _butterworth(cut_hz: float | tuple[float, float], kind: str, sampling_rate: float) -> Floats:
+    return signal.butter(2, cut_hz, kind, fs=sampling_rate, output="sos")
+
+
 def lowpass(values: Floats, sampling_rate: float, cut_hz: float) -> Floats:
     """Zero-phase Butterworth low-pass, fourth order in all; a copy when the rate is too low for the cut."""
     if cut_hz >= 0.45 * sampling_rate or len(values) < 16:
         return values.copy()
-    return signal.sosfiltfilt(signal.butter(2, cut_hz, fs=sampling_rate, output="sos"), values)
+    return signal.sosfiltfilt(_butterworth(cut_hz, "lowpass", sampling_rate), values)
 
 
 def bandpass(values: Floats, sampling_rate: float, low_hz: float, high_hz: float) -> Floats:
     """Zero-phase Butterworth band-pass, fourth order in all."""
     if len(values) < 32:
         return np.zeros_like(values)
-    high_hz = min(high_hz, 0.45 * sampling_rate)
-    return signal.sosfiltfilt(signal.butter(2, [low_hz, high_hz], "bandpass", fs=sampling_rate, output="sos"), values)
+    return signal.sosfiltfilt(_butterworth((low_hz, min(high_hz, 0.45 * sampling_rate)), "bandpass", sampling_rate), values)
 
 
 def moving_mean(values: Floats, width: int) -> Floats:
@@ -76,9 +81,18 @@ def grid(start_s: float, stop_s: float, step_s: float) -> Iterator[tuple[float, 
         yield k * step_s, (k + 1) * step_s
 
 
+def _even_step(sampling_rate: float, most: int) -> int:
+    """The largest step up to `most` that divides a second, so that a shift by whole seconds shifts the choice; `most` when there is none near."""
+    if sampling_rate == round(sampling_rate):
+        for step in range(most, most // 3, -1):
+            if round(sampling_rate) % step == 0:
+                return step
+    return most
+
+
 @dataclass(frozen=True)
 class Thin:
-    """Every `step`-th sample of a stretch, counted from the start of the record, so that the choice does not depend on the stretch."""
+    """Every `step`-th sample of a stretch (about `every_s` apart, no farther), counted from the start of the record, so that the choice does not depend on the stretch."""
 
     offset: int
     step: int
@@ -86,7 +100,7 @@ class Thin:
 
     @classmethod
     def of(cls, stretch: Signal, every_s: float) -> Thin:
-        step = max(1, round(every_s * stretch.sampling_rate))
+        step = _even_step(stretch.sampling_rate, max(1, round(every_s * stretch.sampling_rate)))
         return cls(-round(stretch.start_s * stretch.sampling_rate) % step, step, len(stretch))
 
     def take(self, values: NDArray) -> NDArray:

@@ -31,8 +31,11 @@ Floats = NDArray[np.float64]
 _GRID_S = 60.0
 _SAME_S = 0.09
 """Events of two ECG detectors this close are one candidate."""
+_DOUBT = -0.5
+"""Weight below which an ECG event is no explanation of an upstroke."""
 _DICROTIC_S = 0.42
 """A weak upstroke this soon after a strong one is its dicrotic wave: ejection takes 0.25 to 0.35 s (common practice)."""
+_SILENCE_S = 5.0
 _HALF_PICTURE_S = 0.06
 _REFRACTORY_S = 0.25
 _REACH_S = 0.10
@@ -151,7 +154,7 @@ def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -
     values, missing = fill(ecg.values)
     rate = ecg.sampling_rate
     band = bandpass(values - np.median(values), rate, *QRS_BAND_HZ)
-    energy = np.sqrt(moving_mean(band**2, round(0.09 * rate)))
+    energy = np.sqrt(np.maximum(moving_mean(band**2, round(0.09 * rate)), 0.0))  # its running sum may end a rounding below 0
     place = np.clip(np.rint(ecg.position(events)).astype(int), 0, len(values) - 1)
     loudness = ndimage.maximum_filter1d(energy, round(0.08 * rate) | 1)[place]
     thin = Thin.of(ecg, 0.04)
@@ -175,8 +178,13 @@ def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -
         transits.append(transit)
         spreads.append(spread)
         usual_at.append(usual)
-    ratio = background / np.maximum(np.interp(background_at_s, minutes, usual_at), 1e-12)
+    usual_then = np.interp(background_at_s, minutes, usual_at)
+    ratio = background / np.maximum(usual_then, 1e-12)
     quiet_level = np.clip((0.45 - ratio) / 0.30, 0.0, 1.0)
+    width = round(0.5 * rate) | 1
+    swing = thin.take(ndimage.maximum_filter1d(values, width) - ndimage.minimum_filter1d(values, width))
+    loudest = ndimage.maximum_filter1d(thin.take(energy), round(_SILENCE_S * rate / thin.step) | 1)
+    quiet_level[(loudest < 0.3 * usual_then) | (swing < 0.01 * usual_then)] = 0.0  # a lead that shows nothing says nothing
     quiet_level[thin.take(missing)] = 0.0
     quiet = thin.spread(quiet_level)[place]
     return _Evidence(size, likeness, quiet, background_at_s, quiet_level, np.array(minutes), np.array(transits), np.array(spreads))
@@ -247,7 +255,7 @@ def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
 
 
 def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: _Evidence) -> _Pool:
-    """Every candidate with its weight: ECG events, and upstrokes that no ECG event explains, set back by the transit time."""
+    """Every candidate with its weight: ECG events, and upstrokes that no likely ECG event explains, set back by the transit time."""
     transit = np.interp(feet, evidence.minute_s, evidence.transit_s)
     expected = feet - transit
     ecg_says = _ecg_weight(votes, evidence) if len(events) else np.empty(0)
@@ -258,14 +266,15 @@ def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidenc
     awake = _awake(feet[~weak], events)
     artery_says = np.where(got_pulse, 2.0 - 8.0 * off_s, np.where(got_ripple, 0.6, -1.6 * awake))
     explained = np.zeros(len(feet), dtype=bool)
-    if len(events) and len(feet):
-        explained = np.abs(events[_nearest(events, expected)] - expected) < _SAME_S
+    sure = events[ecg_says > _DOUBT] if len(events) else events
+    if len(sure) and len(feet):
+        explained = np.abs(sure[_nearest(sure, expected)] - expected) < _SAME_S
     lone, lone_strength = expected[~explained], strength[~explained]
     heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level) if len(events) else np.zeros(len(lone))
     time = np.concatenate([events, lone])
     weight = np.concatenate([ecg_says + artery_says, 2.8 * _ramp(lone_strength, 0.2, 0.6) - 1.0 - 3.2 * heard])
     source = np.concatenate(
-        [np.where(has_foot, np.where(ecg_says > -0.5, "fused", "abp"), "ecg").astype(object), np.full(len(lone), "abp", dtype=object)]
+        [np.where(has_foot, np.where(ecg_says > _DOUBT, "fused", "abp"), "ecg").astype(object), np.full(len(lone), "abp", dtype=object)]
     )
     spread = np.interp(time, evidence.minute_s, evidence.spread_s)
     sd = np.where(source == "abp", np.maximum(spread, 0.01), 0.004)
@@ -278,7 +287,7 @@ def _ecg_weight(votes: Floats, evidence: _Evidence) -> Floats:
     big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -6.0, -3.0)
     alike = np.clip(evidence.likeness, 0.0, 1.0) ** 3 * _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
     in_quiet = 3.6 * big + 1.2 * alike - 2.2
-    in_noise = 4.2 * alike - 2.0
+    in_noise = 4.2 * alike - 2.6
     return evidence.quiet * in_quiet + (1 - evidence.quiet) * in_noise + 0.5 * (votes - 0.5)
 
 

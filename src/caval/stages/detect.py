@@ -33,7 +33,7 @@ def qrs(ecg: Signal) -> NDArray[np.float64]:
     if len(values) < rate or missing.all():
         return np.empty(0)
     band = bandpass(values - np.median(values), rate, *QRS_BAND_HZ)
-    energy = np.sqrt(moving_mean(band**2, round(0.09 * rate)))
+    energy = np.sqrt(np.maximum(moving_mean(band**2, round(0.09 * rate)), 0.0))  # its running sum may end a rounding below 0
     bumps, _ = signal.find_peaks(energy, distance=max(1, round(0.12 * rate)))
     bumps = bumps[energy[bumps] > 0.1 * _typical_top(energy, rate)]
     reach = round(0.06 * rate)

@@ -19,6 +19,8 @@ Mask = NDArray[np.bool_]
 
 _LEVEL_MMHG = {"cvp": (-12.0, 45.0), "abp": (10.0, 320.0), "pap": (-12.0, 150.0)}
 """Lowest and highest level, over a second and a half, that a pressure in place takes (own choice, wide of any published normal value)."""
+_FLAT_MMHG = 0.02
+"""A vessel's pressure ranges more than this over a second, whatever its pulse: breathing and the recorder's noise see to it."""
 _SMOOTH_S = 1.5
 _NEIGHBOURS_S = 60.0
 _GUARD_S = 0.25
@@ -41,7 +43,7 @@ def quality(
     ----------
     cvp, ecg, abp, pap : Signal
     flat_s : float
-        A trace that keeps one value this long, seconds, is flat.
+        A trace that does not move for this long, seconds, is flat.
     movement : float
         A second and a half of venous pressure whose range is this many times the usual one (median of the two minutes around) is noise.
     climb_mmhg : float
@@ -60,11 +62,12 @@ def quality(
         _add(found, signal, missing, "gap", "not recorded")
         if missing.all():
             continue
-        still = _still(values, signal.sampling_rate, flat_s) & ~missing
+        tolerance = _FLAT_MMHG if role in _LEVEL_MMHG else 0.002 * float(np.subtract(*np.percentile(values, [99, 1])))
+        still = _still(values, signal.sampling_rate, flat_s, tolerance) & ~missing
         dead = np.zeros_like(still)
         if role in _LEVEL_MMHG:
             dead = _level(found, signal, values, still, *_LEVEL_MMHG[role])
-        _add(found, signal, still & ~dead, "flat", f"one value for {flat_s:g} s or more")
+        _add(found, signal, still & ~dead, "flat", f"no movement for {flat_s:g} s or more")
         _add(found, signal, _clipped(values, signal.sampling_rate) & ~missing & ~still, "clipped", "stands at the recorder's limit")
         if role == "cvp":
             blank = missing | still
@@ -92,11 +95,17 @@ def _widen(mask: Mask, samples: int) -> Mask:
     return ndimage.maximum_filter1d(mask, 2 * samples + 1) if mask.any() else mask
 
 
-def _still(values: Floats, rate: float, flat_s: float) -> Mask:
-    """Samples inside a run of one value that lasts `flat_s`."""
-    same = np.diff(values) == 0
-    still = np.concatenate([same, [False]]) | np.concatenate([[False], same])
-    return _keep_long(still, max(2, round(flat_s * rate)))
+def _still(values: Floats, rate: float, flat_s: float, tolerance: float) -> Mask:
+    """Samples inside a stretch of `flat_s` or more over which the values range by no more than `tolerance`.
+
+    A tolerance, not equality: a flat line that was resampled or filtered on its way here ripples a little.
+    """
+    width = max(2, round(flat_s * rate)) | 1
+    span = ndimage.maximum_filter1d(values, width, mode="nearest") - ndimage.minimum_filter1d(values, width, mode="nearest")
+    core = span <= tolerance
+    core[: width // 2] &= core[min(width // 2, len(core) - 1)]  # repeated ends would make any end flat
+    core[-(width // 2) :] &= core[max(len(core) - 1 - width // 2, 0)]
+    return _widen(core, width // 2)
 
 
 def _level(found: list[pd.DataFrame], signal: Signal, values: Floats, still: Mask, low: float, high: float) -> Mask:
@@ -141,6 +150,7 @@ def _climbing(values: Floats, signal: Signal, climb_mmhg: float) -> Mask:
     move = np.diff(level, prepend=level[0])
     change = _moving_sum(move, reach)
     climbing = (np.abs(change) > climb_mmhg) & (np.abs(change) > 0.9 * _moving_sum(np.abs(move), reach))
+    climbing &= ndimage.maximum_filter1d(np.abs(move), 2 * reach + 1) < 0.12 * np.abs(change)  # a step is a flush, not a climb
     near = _moving_sum(move, reach // 3)  # over two seconds: where the climb itself is, not what lies around it
     one_way = np.sign(near) == np.sign(ndimage.median_filter(change, 2 * reach + 1, mode="nearest"))
     climbing = _widen(climbing, reach) & (np.abs(near) > climb_mmhg / 8.0) & one_way

@@ -19,7 +19,7 @@ from caval.recording import Signal
 from caval.registry import stage
 from caval.stages._picture import Picture, running_pictures
 from caval.stages._signal import fill, lowpass, refine
-from caval.stages._usable import BEFORE_R_S, beat_stops, usable_beats
+from caval.stages._usable import usable_beats
 
 __all__ = ["waves"]
 
@@ -67,12 +67,12 @@ def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: f
         return tables.empty("marks")
     trace = _Trace.of(smooth)
     found = _Found(beats, usable, pictures)
-    found.seek("v", trace.peaks, found.r + 0.20, found.stop)
+    found.seek("v", trace.peaks, found.r + 0.20, found.next_r - 0.08)
     found.seek("x", trace.troughs, found.r + 0.08, found.time["v"] - 0.05)
-    found.seek("y", trace.troughs, found.time["v"] + 0.04, found.stop + 0.10)
+    found.seek("y", trace.troughs, found.time["v"] + 0.04, found.next_r)
     found.seek("a", trace.peaks, found.r - 0.30, np.minimum(found.r + 0.10, found.time["x"] - 0.05))
     found.seek("c", trace.peaks, np.fmax(found.r + 0.02, found.time["a"] + 0.04), found.time["x"] - 0.03)
-    found.seek("h", trace.peaks, found.time["y"] + 0.08, found.stop + BEFORE_R_S - 0.25)
+    found.seek("h", trace.peaks, found.time["y"] + 0.08, found.next_r - 0.25)
     found.corner_c(smooth)
     found.foot_z(trace, smooth, delay_s)
     return found.table(smooth)
@@ -113,7 +113,7 @@ class _Found:
     def __init__(self, beats: pd.DataFrame, usable: NDArray[np.bool_], pictures: list[Picture]) -> None:
         self.r = beats["r_time_s"].to_numpy(float)
         self.beat = beats["beat"].to_numpy(np.int64)
-        self.stop = beat_stops(self.r)
+        self.next_r = np.append(self.r[1:], np.inf)
         self.pictures = pictures
         away = np.abs(self.r[:, None] - np.array([p.centre_s for p in pictures]))
         self.which = away.argmin(axis=1)
