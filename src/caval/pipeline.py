@@ -124,6 +124,11 @@ class Pipeline:
             done |= self._run_stage(stage, signals, done, stretch, progress)
         return {name: _within(name, table, start_s, end_s) for name, table in done.items()}
 
+    def settings_used(self) -> dict[str, dict[str, Any]]:
+        """Every setting of every stage that runs, the user's over the defaults."""
+        chosen = {name: registry.pick(registry.stages(), self.choose.get(name, name), "stage") for name in self.stages}
+        return {name: {**stage.settings, **self.settings.get(name, {})} for name, stage in chosen.items()}
+
     def _order(self, roles: Mapping[str, str], given: Mapping[str, pd.DataFrame]) -> list[Stage]:
         """Stages in an order in which every need is met when its turn comes; those whose gift is given are left out."""
         installed = registry.stages()
@@ -229,7 +234,8 @@ def _detect(detector: registry.Detector, signal: Signal) -> pd.DataFrame:
     found = []
     for start_s, stop_s in _blocks(signal.start_s, signal.stop_s, DETECTOR_GRID_S):
         first, last = np.clip(signal.position([start_s - DETECTOR_MARGIN_S, stop_s + DETECTOR_MARGIN_S]), 0, len(signal)).astype(int)
-        piece = Signal(signal.values[first:last], signal.sampling_rate, signal.start_s + first / signal.sampling_rate, signal.label, signal.unit)
+        from_s = signal.start_s + first / signal.sampling_rate
+        piece = Signal(signal.values[first:last], signal.sampling_rate, from_s, signal.label, signal.unit)
         times = np.asarray(detector.function(piece), dtype=np.float64)
         found.append(times[(times >= start_s) & (times < stop_s)])
     times = np.concatenate(found) if found else np.empty(0)

@@ -108,7 +108,9 @@ def stage(*, name: str, gives: tuple[str, ...], margin_s: float = 0.0) -> Callab
     """Declare a plain function to be a stage; its parameters say what it needs (see `Stage`)."""
 
     def declare(function: Function) -> Function:
-        needs, wants, settings = [], [], {}
+        needs: list[str] = []
+        wants: list[str] = []
+        settings: dict[str, Any] = {}
         for parameter in inspect.signature(function).parameters.values():
             if parameter.kind is parameter.KEYWORD_ONLY:
                 settings[parameter.name] = parameter.default

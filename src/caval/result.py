@@ -85,7 +85,7 @@ class Result:
             "stop_s": stretch[1],
             "stages": [pipeline.choose.get(s, s) for s in pipeline.stages],
             "detectors": list(pipeline.detectors),
-            "settings": {k: dict(v) for k, v in pipeline.settings.items()},
+            "settings": pipeline.settings_used(),
             "delay_s": None,
             "counts": {
                 "beats": len(beats),

@@ -60,10 +60,10 @@ def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None) 
         name one.
     """
     roles: dict[str, str] = {}
-    for role, label in (chosen or {}).items():
-        if role not in ROLES:
-            raise InputError(f"no role {role!r}; roles are: {', '.join(ROLES)}")
-        roles[role] = recording.channel(label).label
+    for asked, label in (chosen or {}).items():
+        if asked not in ROLES:
+            raise InputError(f"no role {asked!r}; roles are: {', '.join(ROLES)}")
+        roles[asked] = recording.channel(label).label
     for name, role in ROLES.items():
         if name in roles:
             continue

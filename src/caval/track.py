@@ -14,7 +14,7 @@ from caval.errors import InputError
 
 __all__ = ["Track"]
 
-_BEAT_SYMBOLS = frozenset("N L R B A a J S V r F e j n E / f Q ?".split())
+_BEAT_SYMBOLS = frozenset("NLRBAaJSVrFejnE/fQ?")
 _BEAT_TEXTS = frozenset({"R", "QRS", "beat"}) | _BEAT_SYMBOLS
 
 
@@ -46,7 +46,8 @@ class Track:
     extra: Mapping[str, NDArray] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
-        lengths = {len(c) for c in (self.onset_s, self.duration_s, self.code, self.channel, *self.extra.values())}
+        columns: list[NDArray] = [self.onset_s, self.duration_s, self.code, self.channel, *self.extra.values()]
+        lengths = {len(column) for column in columns}
         if len(lengths) != 1:
             raise InputError(f"columns of a track must have one length, not {sorted(lengths)}")
 
@@ -61,7 +62,7 @@ class Track:
     def build(
         cls,
         onset_s: Iterable[float],
-        text: Sequence[str],
+        text: Sequence[str] | NDArray,
         *,
         duration_s: Iterable[float] | float = 0.0,
         channel: Iterable[int] | int = -1,

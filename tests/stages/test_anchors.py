@@ -63,7 +63,8 @@ def test_matching_agrees_with_wfdbs_comparator():
     kept = reference[rng.random(400) > 0.1]
     found = np.sort(np.concatenate([kept + rng.normal(0, 0.05, len(kept)), rng.uniform(0, reference[-1], 30)]))
     ours = match_events(reference, found, window_s=WINDOW_S)
-    theirs = wfdb.processing.compare_annotations(np.rint(reference * 1000).astype(int), np.rint(found * 1000).astype(int), int(WINDOW_S * 1000))
+    in_ms = [np.rint(times * 1000).astype(int) for times in (reference, found)]
+    theirs = wfdb.processing.compare_annotations(*in_ms, int(WINDOW_S * 1000))
     # wfdb lets each reference take its nearest first; a contested pair may fall differently, one in a hundred at these densities
     assert len(ours.reference) == pytest.approx(theirs.tp, abs=4)
     assert len(ours.missed) == pytest.approx(theirs.fn, abs=4)

@@ -49,7 +49,8 @@ def test_drawn_waves_are_found_where_they_are(heart_rate, noise_mmhg):
         agreement = match_events(expected, found, window_s=0.03)  # 30 ms: own choice, no published tolerance exists
         assert agreement.sensitivity >= 0.96, wave  # beats at the edges of the record lack a neighbour
         assert agreement.precision >= 0.96, wave
-        assert np.median(np.abs(found[agreement.found] - expected[agreement.reference])) <= 0.012, wave  # half way between samples, 8 ms, and noise
+        error = found[agreement.found] - expected[agreement.reference]
+        assert np.median(np.abs(error)) <= 0.012, wave  # a sample is 8 ms, and noise moves the flat top of a wave
 
 
 def test_waves_of_a_beat_stand_in_the_order_of_the_cardiac_cycle(marked):

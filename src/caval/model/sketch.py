@@ -1,8 +1,8 @@
 """A short drawn record with known truth, for the demo and for tests: shapes, not mechanics.
 
 Every beat is a sum of smooth bumps on the venous trace, an ECG of Gaussian waves (the shape of the model of McSharry et al.,
-IEEE Trans Biomed Eng 2003;50:289, in time instead of phase) and an arterial pulse with a notch. Mechanical ventilation moves the venous baseline.
-The circulation model replaces it where waves must come out of volumes and compliances.
+IEEE Trans Biomed Eng 2003;50:289, in time instead of phase) and an arterial pulse with a notch. Mechanical ventilation moves the
+venous baseline. The circulation model replaces it where waves must come out of volumes and compliances.
 """
 
 from __future__ import annotations
@@ -166,7 +166,8 @@ def _truth(
         near = extrema[np.clip(np.searchsorted(extrema, place / step), 1, len(extrema) - 1)[:, None] + np.array([-1, 0])]
         best = near[np.arange(len(r)), np.abs(near * step - place[:, None]).argmin(axis=1)]
         good = (np.abs(best * step - place) < 0.06) & (place > 0) & (place < time[-1])
-        rows.append(pd.DataFrame({"time_s": best[good] * step, "mark": wave, "beat": np.flatnonzero(good), "pressure_mmhg": clean[best[good]]}))
+        found = {"time_s": best[good] * step, "mark": wave, "beat": np.flatnonzero(good), "pressure_mmhg": clean[best[good]]}
+        rows.append(pd.DataFrame(found))
     return pd.concat(rows).sort_values("time_s", kind="stable", ignore_index=True)
 
 

@@ -56,7 +56,7 @@ def running_pictures(smooth: Signal, beats: pd.DataFrame, usable: NDArray[np.boo
     r = beats["r_time_s"].to_numpy(float)
     before = np.diff(r, prepend=np.nan)
     after = np.diff(r, append=np.nan)
-    grid_s = np.arange(-round(BEFORE_S / STEP_S), round(AFTER_S / STEP_S)) * STEP_S
+    grid_s = np.arange(-round(BEFORE_S / STEP_S), round(AFTER_S / STEP_S), dtype=np.float64) * STEP_S
     traces = smooth.at(r[:, None] + grid_s)
     middle = (grid_s >= -0.2) & (grid_s < 0.5)
     level = traces[:, middle].mean(axis=1)
@@ -82,14 +82,15 @@ def _picture(centre_s: float, grid_s: Floats, traces: Floats, interval_s: float)
     time = grid_s[inside]
     rest = traces[:, inside] - median
     lag = round(0.04 / STEP_S)
-    noise = 1.4826 * float(_median(np.abs(rest[:, lag:] - rest[:, :-lag]))) / np.sqrt(2.0)
+    noise = 1.4826 * float(_median(np.abs(rest[:, lag:] - rest[:, :-lag]))) / 2.0**0.5
     span = float(np.ptp(median)) or 1e-9
-    return Picture(centre_s, time, median, interval_s, span, noise, _places(time, median, interval_s, span, noise / np.sqrt(len(traces))))
+    noise_of_median = noise / len(traces) ** 0.5
+    return Picture(centre_s, time, median, interval_s, span, noise, _places(time, median, interval_s, span, noise_of_median))
 
 
 def _median(values: Floats, axis: int | None = None) -> Floats:
     """Median without the missing values; the plain one, several times faster, where none is missing."""
-    return np.nanmedian(values, axis=axis) if np.isnan(values).any() else np.median(values, axis=axis)
+    return np.asarray((np.nanmedian if np.isnan(values).any() else np.median)(values, axis=axis), dtype=np.float64)
 
 
 def _places(time: Floats, trace: Floats, interval: float, span: float, noise: float) -> dict[str, float]:
@@ -142,7 +143,14 @@ def _off(time: float, usual: float, spread: float) -> float:
 
 
 def _best(
-    index: NDArray[np.int64], time: Floats, height: Floats, span: float, between: tuple[float, float], usual: float, spread: float, weight: float
+    index: NDArray[np.int64],
+    time: Floats,
+    height: Floats,
+    span: float,
+    between: tuple[float, float],
+    usual: float,
+    spread: float,
+    weight: float,
 ) -> float | None:
     """Time of the extremum between two times that stands highest and nearest to the usual place; None when there is none."""
     index = index[(time[index] > between[0]) & (time[index] < between[1])]

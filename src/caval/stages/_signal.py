@@ -62,11 +62,11 @@ def refine(values: Floats, index: NDArray[np.int64]) -> Floats:
     """Fractional places of extrema at `index`, by the parabola through three samples; within half a sample of it."""
     if len(values) < 3:
         return index.astype(np.float64)
-    middle = np.clip(index, 1, len(values) - 2)
+    middle = np.clip(index, 1, len(values) - 2).astype(np.int64)
     before, here, after = values[middle - 1], values[middle], values[middle + 1]
     bend = before - 2 * here + after
     shift = np.where(bend != 0, 0.5 * (before - after) / np.where(bend == 0, 1, bend), 0.0)
-    return index + np.where(middle == index, np.clip(shift, -0.5, 0.5), 0.0)
+    return index.astype(np.float64) + np.where(middle == index, np.clip(shift, -0.5, 0.5), 0.0)
 
 
 def runs(mask: NDArray[np.bool_]) -> NDArray[np.int64]:
@@ -82,7 +82,7 @@ def grid(start_s: float, stop_s: float, step_s: float) -> Iterator[tuple[float, 
 
 
 def _even_step(sampling_rate: float, most: int) -> int:
-    """The largest step up to `most` that divides a second, so that a shift by whole seconds shifts the choice; `most` when there is none near."""
+    """The largest step up to `most` that divides a second, so that a shift by whole seconds shifts the choice; else `most`."""
     if sampling_rate == round(sampling_rate):
         for step in range(most, most // 3, -1):
             if round(sampling_rate) % step == 0:
@@ -92,7 +92,7 @@ def _even_step(sampling_rate: float, most: int) -> int:
 
 @dataclass(frozen=True)
 class Thin:
-    """Every `step`-th sample of a stretch (about `every_s` apart, no farther), counted from the start of the record, so that the choice does not depend on the stretch."""
+    """Every `step`-th sample of a stretch, counted from the start of the record, so that the choice does not depend on the stretch."""
 
     offset: int
     step: int
@@ -100,6 +100,7 @@ class Thin:
 
     @classmethod
     def of(cls, stretch: Signal, every_s: float) -> Thin:
+        """Samples about `every_s` apart, no farther."""
         step = _even_step(stretch.sampling_rate, max(1, round(every_s * stretch.sampling_rate)))
         return cls(-round(stretch.start_s * stretch.sampling_rate) % step, step, len(stretch))
 

@@ -70,7 +70,8 @@ def anchors(
     time = candidates["time_s"].to_numpy(float)
     is_foot = (candidates["detector"] == "upstroke").to_numpy()
     feet = np.unique(time[is_foot]) if abp is not None else np.empty(0)
-    events, votes = _merge(time[~is_foot], candidates["detector"].to_numpy(object)[~is_foot]) if ecg is not None else (np.empty(0), np.empty(0))
+    of_ecg = ~is_foot & (ecg is not None)
+    events, votes = _merge(time[of_ecg], candidates["detector"].to_numpy(object)[of_ecg])
     if not len(feet) and not len(events):
         return tables.empty("beats")
     strength = _strength(abp, feet) if abp is not None else np.empty(0)

@@ -56,7 +56,7 @@ def _time_of(marks: pd.DataFrame, wave: str, beats: pd.DataFrame) -> np.ndarray:
 
 
 def _mean_between(values: np.ndarray, missing: np.ndarray, cvp: Signal, start_s: np.ndarray, stop_s: np.ndarray) -> np.ndarray:
-    """Time-weighted mean of the trace between two times a row, by the trapezoid rule on the samples and both ends; NaN where some are missing."""
+    """Mean of the trace between two times a row, by the trapezoid rule on the samples and both ends; NaN where some are missing."""
     area = np.concatenate([[0.0], np.cumsum((values[1:] + values[:-1]) / 2.0)])  # integral up to each sample, in samples
     lost = np.concatenate([[0.0], np.cumsum(missing[1:] | missing[:-1])])
     index = np.arange(len(values))

@@ -1,4 +1,4 @@
-"""Which stretches of which channel cannot be read, and why: what is dead, flat, clipped, disconnected, implausible or buried in movement."""
+"""Which stretches of which channel cannot be read, and why: dead, flat, clipped, disconnected, implausible or buried in movement."""
 
 from __future__ import annotations
 
@@ -71,7 +71,8 @@ def quality(
         _add(found, signal, _clipped(values, signal.sampling_rate) & ~missing & ~still, "clipped", "stands at the recorder's limit")
         if role == "cvp":
             blank = missing | still
-            _add(found, signal, _climbing(values, signal, climb_mmhg) & ~blank, "implausible", "the level climbs or falls without a turn")
+            climbing = _climbing(values, signal, climb_mmhg) & ~blank
+            _add(found, signal, climbing, "implausible", "the level climbs or falls without a turn")
             _add(found, signal, _moved(values, blank, signal, movement), "noise", f"range above {movement:g} times the usual")
     return pd.concat(found, ignore_index=True) if found else tables.empty("spans")
 
@@ -114,7 +115,8 @@ def _level(found: list[pd.DataFrame], signal: Signal, values: Floats, still: Mas
     dead = ((level < low) | (np.abs(level) < 0.05)) & still
     strange = ((level < low) | (level > high)) & ~dead
     _add(found, signal, dead, "disconnected", "no pulse, and a level of zero or below what a vessel holds")
-    _add(found, signal, _widen(strange, round(_GUARD_S * signal.sampling_rate)) & ~dead, "implausible", f"level outside {low:g} to {high:g} mmHg")
+    strange = _widen(strange, round(_GUARD_S * signal.sampling_rate)) & ~dead
+    _add(found, signal, strange, "implausible", f"level outside {low:g} to {high:g} mmHg")
     return dead
 
 

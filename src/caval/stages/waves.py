@@ -163,7 +163,7 @@ class _Found:
         self.confidence[wave] = np.where(hit, clarity * np.exp(-0.125 * off[rows, best] ** 2), np.nan)
 
     def corner_c(self, smooth: Signal) -> None:
-        """Where no peak of c stands between a and x but the picture has c: the corner of the slope, the point farthest above the line a–x."""
+        """Where c has no peak between a and x but the picture has c: the corner of the slope, the point farthest above the line a–x."""
         a, x, place = self.time["a"], self.time["x"], self.place("c")
         lack = self.usable & np.isnan(self.time["c"]) & np.isfinite(a) & np.isfinite(x) & np.isfinite(place)
         rows = np.flatnonzero(lack)
