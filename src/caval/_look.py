@@ -50,9 +50,10 @@ def print_record(recording: Recording, *, roles: Mapping[str, str], unit_of: Map
         )
     _print(head, "", table)
     said = [*recording.notes, *([why] if why else []), *([unsaid] if unsaid else [])]
-    if recording.tracks:
+    noted = {name: track for name, track in recording.tracks.items() if len(track)}
+    if noted:
         tracks = _table("annotations", "number", "texts")
-        for name, track in recording.tracks.items():
+        for name, track in noted.items():
             tracks.add_row(name, str(len(track)), _some(track.texts))
         _print("", tracks)
     if said:

@@ -11,7 +11,7 @@ Time is seconds from the start of the record; samples count from 0 in each chann
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from datetime import datetime
 from pathlib import Path
@@ -22,6 +22,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from caval.errors import InputError
 from caval.track import Track
+from caval.units import is_pressure_unit
 
 __all__ = ["Calibration", "Channel", "Recording", "Signal"]
 
@@ -183,6 +184,40 @@ class Channel:
                 values[max(gap_start - start, 0) : gap_stop - start] = np.nan
         return values
 
+    def blocks(self, length: int = 1 << 20) -> Iterator[tuple[int, NDArray]]:
+        """Stored samples piece by piece, each with the number of its first sample."""
+        for start in range(0, self.n_samples, length):
+            yield start, self.digital(start, min(start + length, self.n_samples))
+
+    def holes(self) -> NDArray[np.int64]:
+        """Sample ranges ``[start, stop)`` without a value: gaps, missing codes and NaN; shape (k, 2), sorted."""
+        found = [self.gaps]
+        for start, stored in self.blocks():
+            if self.calibration is None:
+                mask = ~np.isfinite(stored)
+            elif self.calibration.missing is not None:
+                mask = stored == self.calibration.missing
+            else:
+                continue
+            edges = np.flatnonzero(np.diff(np.concatenate([[False], mask, [False]]).astype(np.int8)))
+            found.append(edges.reshape(-1, 2).astype(np.int64) + start)
+        ranges = np.concatenate(found)
+        return ranges[np.argsort(ranges[:, 0], kind="stable")]
+
+    def integer_calibration(self, low: int, high: int) -> Calibration:
+        """The channel's own calibration or, for a channel of floats, a fixed one: steps of 0.01 in a pressure unit, of 0.001 in any other,
+        ten times wider as often as the largest value needs."""
+        if self.calibration is not None:
+            return self.calibration
+        largest = 0.0
+        for _, values in self.blocks():
+            finite = values[np.isfinite(values)]
+            largest = max(largest, float(np.abs(finite).max(initial=0.0)))
+        step = 0.01 if is_pressure_unit(self.unit) else 0.001
+        while largest > step * high:
+            step *= 10.0
+        return Calibration(low, high, low * step, high * step)
+
     def signal(self, start_s: float = 0.0, stop_s: float | None = None) -> Signal:
         """The stretch ``[start_s, stop_s)`` in memory."""
         start, stop = self.span(start_s, stop_s)
@@ -208,6 +243,8 @@ class Recording:
         Name of the format it was read with and the file, None for a recording made in memory.
     notes : tuple of str
         What the reader had to assume or mend, one line each.
+    files : tuple of Path
+        Every file that holds its header or samples.
     """
 
     name: str
@@ -218,6 +255,7 @@ class Recording:
     format: str = ""
     path: Path | None = None
     notes: tuple[str, ...] = ()
+    files: tuple[Path, ...] = ()
 
     @property
     def labels(self) -> tuple[str, ...]:

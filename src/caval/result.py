@@ -205,14 +205,15 @@ def _write_json(content: Mapping[str, Any], path: Path) -> None:
 
 
 def _fingerprints(recording: Recording) -> dict[str, Any]:
-    """Name and SHA-256 of the input file; a record made in memory has none."""
-    if recording.path is None or not recording.path.is_file():
-        return {"name": recording.name, "sha256": None}
-    digest = hashlib.sha256()
-    with open(recording.path, "rb") as stream:
-        while part := stream.read(1 << 20):
-            digest.update(part)
-    return {"name": recording.path.name, "sha256": digest.hexdigest()}
+    """Name and SHA-256 of the input, and of each of its files; a record made in memory has none."""
+    sums = {path.name: _sha256(path) for path in recording.files}
+    name = recording.path.name if recording.path is not None else recording.name
+    return {"name": name, "sha256": sums.get(name), "files": sums}
+
+
+def _sha256(path: Path) -> str:
+    with open(path, "rb") as stream:
+        return hashlib.file_digest(stream, "sha256").hexdigest()
 
 
 def _move_all(scratch: Path, directory: Path, *, force: bool, keep: Path | None) -> list[Path]:

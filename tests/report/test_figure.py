@@ -145,10 +145,8 @@ def test_little_is_read_of_a_long_record() -> None:
 
     drawn = sketch(minutes=10, ecg_rate=125)
     r = np.concatenate([drawn.r_times_s + 600 * k for k in range(36)])
-    marks = pd.concat(
-        [drawn.marks.assign(time_s=drawn.marks["time_s"] + 600 * k, beat=drawn.marks["beat"] + len(drawn.r_times_s) * k) for k in range(36)],
-        ignore_index=True,
-    )
+    once, n = drawn.marks, len(drawn.r_times_s)
+    marks = pd.concat([once.assign(time_s=once["time_s"] + 600 * k, beat=once["beat"] + n * k) for k in range(36)], ignore_index=True)
 
     def long(c: Channel) -> Channel:
         return replace(c, n_samples=c.n_samples * 36, source=counting(c.source, c.n_samples))

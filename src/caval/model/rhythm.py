@@ -20,6 +20,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, fields, replace
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -50,7 +51,7 @@ KINDS: dict[str, RhythmKind] = {
     for k in (
         RhythmKind("sinus", "(N", 70, 70, 0.16, "sinus rhythm"),
         RhythmKind("tachycardia", "(N", 140, 140, 0.12, "sinus tachycardia, 100 to 180/min"),
-        RhythmKind("first_degree_block", "(N", 70, 70, 0.30, "sinus rhythm with a long PR"),
+        RhythmKind("first_degree_block", "(BI", 70, 70, 0.30, "sinus rhythm with a long PR"),
         RhythmKind("complete_block", "(B3", 38, 80, 0.16, "atria in sinus rhythm, ventricles in an escape rhythm, nothing conducted"),
         RhythmKind("fibrillation", "(AFIB", 95, 0, 0.0, "atrial fibrillation: no P, irregular R"),
         RhythmKind("junctional", "(NOD", 50, 50, 0.0, "junctional rhythm, atria activated backwards"),
@@ -59,8 +60,8 @@ KINDS: dict[str, RhythmKind] = {
         RhythmKind("atrial_premature", "(N", 70, 70, 0.16, "sinus rhythm with atrial premature beats that reset the node"),
     )
 }
-"""The rhythms there are. ``(N``, ``(AFIB``, ``(NOD`` and ``(P`` are strings of the MIT-BIH databases; they have none for complete block, and
-``(B3`` is that of the European ST-T database (from memory)."""
+"""The rhythms there are. ``(N``, ``(AFIB``, ``(NOD`` and ``(P`` are rhythm strings of the MIT-BIH Arrhythmia Database, ``(BI`` is that of
+the MIT-BIH Malignant Ventricular Arrhythmia Database; ``(B3`` for complete block is that of the European ST-T database (from memory)."""
 
 
 @dataclass(frozen=True)
@@ -272,7 +273,7 @@ def schedule(parts: Sequence[Mapping[str, Any]], duration_s: float, *, seed: int
         options = {k: v for k, v in part.items() if k in known}
         plan.append((float(part.get("onset_s", 0.0)), str(part["kind"]), _Settings(**options)))
     onsets = [onset for onset, _, _ in plan]
-    if not plan or onsets[0] != 0 or any(b <= a for a, b in zip(onsets, onsets[1:], strict=False)) or onsets[-1] >= duration_s:
+    if not plan or onsets[0] != 0 or any(b <= a for a, b in pairwise(onsets)) or onsets[-1] >= duration_s:
         raise InputError(f"onsets of a schedule of rhythms {onsets} s: the first must be 0 and they must rise, below {duration_s:g} s")
     return _join(plan, duration_s, seed)
 
@@ -299,7 +300,9 @@ def _join(plan: Sequence[tuple[float, str, _Settings]], duration_s: float, seed:
         rng = np.random.default_rng([seed, number])
         beats = _MAKERS[kind](onset, stop - onset, settings, rng)
         late = (beats.r >= stop) & np.isin(np.arange(len(beats.r)), beats.to[beats.p < stop])
-        keep_r = (beats.r >= onset) & ((beats.r < stop) | late) & (beats.r > last_r + _REFRACTORY_S)
+        orphan = np.zeros(len(beats.r), dtype=bool)  # its P would belong to the rhythm before
+        orphan[beats.to[(beats.p < onset) & (beats.to >= 0)]] = number > 0
+        keep_r = (beats.r >= onset) & ((beats.r < stop) | late) & (beats.r > last_r + _REFRACTORY_S) & ~orphan
         keep_p = (beats.p >= onset) & (beats.p < stop)
         place = np.append(np.where(keep_r, np.cumsum(keep_r) - 1 + placed, -1), -1)
         p.append(beats.p[keep_p])
@@ -339,7 +342,7 @@ def _checked(kind: str, settings: _Settings) -> tuple[RhythmKind, _Settings]:
     conducts = kind in ("sinus", "tachycardia", "first_degree_block", "ventricular_premature", "atrial_premature")
     longest = 0.75 * 60.0 / heart_rate
     if conducts and filled.pr_s is not None and filled.pr_s > longest:
-        raise InputError(f"pr_s = {filled.pr_s!r}: at {heart_rate:g}/min it must not be above {longest:.3f} s (three quarters of the interval)")
+        raise InputError(f"pr_s = {filled.pr_s!r}: at {heart_rate:g}/min it must be between 0.06 and {longest:.3f} s, 3/4 of the interval")
     return chosen, filled
 
 

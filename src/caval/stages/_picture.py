@@ -97,7 +97,7 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
     """Where the waves of a median beat are: the choice of extrema, in the order of waves, that fits height and common timing best.
 
     Timing (from R, through the line; common practice and facts of section 1 of the wave table): a −0.06 s, c 0.11 s, x 0.235 s,
-    v 0.33 s + 0.16 of the interval, y 0.18 s after v.
+    v 0.33 s + 0.16 of the interval, y 0.17 s after v.
     """
     peaks = _prominent(trace, 1.0, max(0.015 * span, 2.0 * noise))
     troughs = _prominent(trace, -1.0, max(0.015 * span, 2.0 * noise))
@@ -116,7 +116,7 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
         places["a"] = a
     if "v" in places:
         limit = min(places["v"] + 0.36, interval + min(places.get("a", -0.1), -0.02) - 0.03)
-        y = _best(troughs, time, -trace, span, (places["v"] + 0.05, limit), places["v"] + 0.18, 0.08, 1.5)
+        y = _best(troughs, time, -trace, span, (places["v"] + 0.05, limit), places["v"] + 0.17, 0.10, 3.0)
         if y is not None:
             places["y"] = y
     if "x" in places:

@@ -1,0 +1,95 @@
+"""Time-stamped annotation lists of EDF+: bytes to columns and back.
+
+An annotation is ``+onset [0x15 duration] 0x14 text 0x14 … 0x00``; the first of each data record has no text and keeps the time of the
+record (EDF+ specification, 2.2.2 to 2.2.4).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from caval.errors import FileError, InputError
+
+__all__ = ["decode", "encode", "seconds_text", "spread"]
+
+
+def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], list[float], list[float], list[str]]:
+    """What annotation signals hold, a bytes object a data record.
+
+    Returns
+    -------
+    starts_s : float64 array, shape (n records,)
+        Time of each data record after the file's start time, NaN where none is kept.
+    onset_s, duration_s, text : lists
+        Annotations in file order; a duration that is absent is 0.
+    """
+    starts = np.full(len(records), np.nan)
+    onsets: list[float] = []
+    durations: list[float] = []
+    texts: list[str] = []
+    for number, raw in enumerate(records):
+        for tal in raw.split(b"\x14\x00"):
+            body = tal.lstrip(b"\x00")
+            if not body:
+                continue
+            stamp, *words = body.split(b"\x14")
+            onset, _, duration = stamp.partition(b"\x15")
+            try:
+                at, lasts = float(onset), float(duration or 0)
+            except ValueError:
+                raise FileError(f"{name}: data record {number} holds an annotation at {onset[:20]!r}, which is no time") from None
+            if not any(words) and np.isnan(starts[number]):
+                starts[number] = at
+            for word in words:
+                if word:
+                    onsets.append(at)
+                    durations.append(lasts)
+                    texts.append(word.decode("utf-8", errors="replace"))
+    return starts, onsets, durations, texts
+
+
+def seconds_text(seconds: float) -> str:
+    """Seconds with as many decimals as they need, at most nine, never an exponent."""
+    text = f"{seconds:.9f}".rstrip("0").rstrip(".")
+    return "0" if text in ("-0", "") else text
+
+
+def encode(onset_s: float, duration_s: float, text: str) -> bytes:
+    """One annotation."""
+    if any(mark in text for mark in "\x00\x14\x15"):
+        raise InputError(f"annotation {text!r} holds a control character that EDF+ uses itself (0, 20 or 21)")
+    sign = "" if onset_s < 0 and seconds_text(onset_s) != "0" else "+"
+    lasts = f"\x15{seconds_text(duration_s)}" if duration_s > 0 else ""
+    return f"{sign}{seconds_text(onset_s)}{lasts}\x14{text}\x14\x00".encode()
+
+
+def spread(stamps: Sequence[bytes], tals: Sequence[bytes], homes: NDArray[np.int64]) -> tuple[list[bytes], int]:
+    """Annotations laid into data records, each into its own (`homes`) or the next with room, and the bytes a record then needs.
+
+    Parameters
+    ----------
+    stamps : sequence of bytes
+        The time-keeping annotation of each record.
+    tals : sequence of bytes
+        Annotations in time order.
+    homes : int array
+        The record in which each would best stand, ascending.
+    """
+    sizes = np.array([len(t) for t in tals], dtype=np.int64)
+    stamp = max(len(s) for s in stamps)
+    room = stamp + max(int(sizes.max(initial=0)), int(np.ceil(sizes.sum() / len(stamps) * 1.1)))
+    while True:
+        laid, waiting = [], 0
+        for number, start in enumerate(stamps):
+            parts, used = [start], len(start)
+            while waiting < len(tals) and (homes[waiting] <= number) and used + sizes[waiting] <= room:
+                parts.append(tals[waiting])
+                used += int(sizes[waiting])
+                waiting += 1
+            laid.append(b"".join(parts))
+        if waiting == len(tals):
+            return laid, room
+        room += int(np.ceil(sizes[waiting:].sum() / len(stamps) * 1.1)) + 1

@@ -1,0 +1,31 @@
+"""WFDB records and annotation files for caval."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from caval.registry import Format
+from caval_wfdb.annotation import read_annotations
+from caval_wfdb.read import header_path, read_wfdb
+from caval_wfdb.write import write_marked, write_wfdb
+
+__all__ = ["FORMAT", "read_annotations", "read_wfdb", "write_marked", "write_wfdb"]
+
+
+def _owns(path: Path) -> bool:
+    """A record name without ending, or any file whose ending no other format claims and that looks like annotations."""
+    if header_path(path).is_file():
+        return True
+    return path.is_file() and path.suffix != "" and path.read_bytes()[-2:] == b"\0\0"
+
+
+FORMAT = Format(
+    name="wfdb",
+    description="WaveForm DataBase records (.hea with .dat) and annotation files",
+    suffixes=(".hea",),
+    read=read_wfdb,
+    write=write_wfdb,
+    read_track=read_annotations,
+    write_marked=write_marked,
+    owns=_owns,
+)

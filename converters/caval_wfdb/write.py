@@ -1,0 +1,223 @@
+"""A Recording into a WFDB record, and a track into an annotation file: integers travel, never floats."""
+
+from __future__ import annotations
+
+import os
+from fractions import Fraction
+from math import gcd, lcm
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from caval.errors import FileError, InputError
+from caval.recording import Calibration, Channel, Recording
+from caval.track import Track
+from caval_wfdb.annotation import TRACK_ENDING, track_bytes
+
+__all__ = ["ticks_per_second", "write_marked", "write_wfdb"]
+
+_BLOCK_FRAMES = 1 << 16
+_BITS = {"212": 12, "16": 16, "24": 24, "32": 32}
+
+
+def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
+    """Write NAME.hea, NAME.dat and an annotation file for each track, by the track's name.
+
+    Rates become samples a frame. Stored integers are copied, in format 16 (or 212 where the source had it, 24 or 32 where the integers
+    need it). WFDB's whole-number baseline cannot hold every calibration, and its missing code is a value elsewhere: what it cannot hold
+    (limits, true lengths, labels) stands in comments ``caval NUMBER KEY VALUE``, which the reader puts back. Gaps become the missing code.
+
+    Raises
+    ------
+    InputError
+        Rates without a common frame, or integers of more than 32 bits.
+    FileError
+        The files cannot be written.
+    """
+    path = Path(path)
+    if not recording.channels:
+        raise InputError(f"{recording.name!r} has no channel to write")
+    name = path.stem
+    frame_rate, widths = _frame(recording)
+    n_frames = max(-(-c.n_samples // w) for c, w in zip(recording.channels, widths, strict=True))
+    fmt = _format(recording)
+    low, high = -(2 ** (_BITS[fmt] - 1)), 2 ** (_BITS[fmt] - 1) - 1
+    calibrations = [c.integer_calibration(low + 1, high) for c in recording.channels]
+    data, header = path.with_suffix(".dat"), path.with_suffix(".hea")
+    written = [header, data]
+    try:
+        with open(data, "wb") as stream:
+            sums, firsts, rails = _write_samples(stream, recording, calibrations, widths, n_frames, fmt)
+            stream.flush()
+            os.fsync(stream.fileno())
+        lines = [_record_line(recording, name, frame_rate, n_frames)]
+        comments = [c for c in recording.header.get("wfdb.comments", "").splitlines() if c]
+        for i, (channel, calibration, width) in enumerate(zip(recording.channels, calibrations, widths, strict=True)):
+            lines.append(_signal_line(channel, calibration, f"{name}.dat", fmt, width, frame_rate, firsts[i], sums[i]))
+            comments += [f"caval {i} {key} {value}" for key, value in _kept(channel, calibration, width * n_frames, low, rails[i]).items()]
+        header.write_text("\n".join([*lines, *(f"# {c}" for c in comments)]) + "\n", encoding="utf-8")
+        for ending, track in recording.tracks.items():
+            if len(track):
+                target = path.with_suffix(f".{'atr' if ending == 'annotations' else ending}")
+                target.write_bytes(track_bytes(track, ticks_per_second(recording)))
+                written.append(target)
+    except OSError as error:
+        if isinstance(error, FileError):
+            raise
+        raise FileError(f"cannot write {path}: {error.strerror or error}") from error
+    return tuple(written)
+
+
+def write_marked(recording: Recording, track: Track, directory: Path, stem: str) -> tuple[Path, ...]:
+    """Write `track` as STEM.cvp; for a recording that is no WFDB record also the record itself. An empty track gives no file."""
+    written: list[Path] = []
+    if recording.format != "wfdb":
+        written += write_wfdb(recording, directory / f"{stem}.hea")
+    if len(track):
+        target = directory / f"{stem}.{TRACK_ENDING}"
+        target.write_bytes(track_bytes(track, ticks_per_second(recording)))
+        written.append(target)
+    return tuple(written)
+
+
+def ticks_per_second(recording: Recording) -> float:
+    """Ticks of our annotation files: the rate of the fastest channel."""
+    return max(c.sampling_rate for c in recording.channels)
+
+
+def _frame(recording: Recording) -> tuple[Fraction, list[int]]:
+    """Frames a second, and the samples of each channel in one."""
+    rates = [Fraction(c.sampling_rate).limit_denominator(10**6) for c in recording.channels]
+    scale = lcm(*(r.denominator for r in rates))
+    frame_rate = Fraction(gcd(*(int(r * scale) for r in rates)), scale)
+    widths = [int(r / frame_rate) for r in rates]
+    if sum(widths) > 10**6:
+        listed = ", ".join(f"{c.label} {c.sampling_rate:.9g} Hz" for c in recording.channels)
+        raise InputError(f"no frame holds whole samples of every channel ({listed}); resample one of them")
+    return frame_rate, widths
+
+
+def _format(recording: Recording) -> str:
+    ranges = [(c.calibration.digital_min, c.calibration.digital_max) for c in recording.channels if c.calibration is not None]
+    low, high = min((r[0] for r in ranges), default=0), max((r[1] for r in ranges), default=0)
+    if ranges and len(ranges) == len(recording.channels) and all(c.header.get("wfdb.fmt") == "212" for c in recording.channels):
+        return "212"
+    for fmt in ("16", "24", "32"):
+        if -(2 ** (_BITS[fmt] - 1)) <= low and high < 2 ** (_BITS[fmt] - 1):
+            return fmt
+    raise InputError(f"integers from {low} to {high}: WFDB holds 32 bits")
+
+
+def _write_samples(
+    stream: object, recording: Recording, calibrations: list[Calibration], widths: list[int], n_frames: int, fmt: str
+) -> tuple[list[int], list[int], list[int]]:
+    """Write all frames; for each channel the sum of its samples, the first, and how many valid ones stand on the missing code."""
+    missing = -(2 ** (_BITS[fmt] - 1))
+    holes = [c.holes() for c in recording.channels]
+    sums, firsts, rails = ([0] * len(widths) for _ in range(3))
+    for first in range(0, n_frames, _BLOCK_FRAMES):
+        last = min(first + _BLOCK_FRAMES, n_frames)
+        columns = []
+        for i, (channel, calibration, width) in enumerate(zip(recording.channels, calibrations, widths, strict=True)):
+            values = _integers(channel, calibration, first * width, last * width, missing)
+            blank = np.zeros(len(values), dtype=bool)
+            blank[max(0, channel.n_samples - first * width) :] = True
+            for start, stop in holes[i]:
+                if stop > first * width and start < last * width:
+                    blank[max(0, start - first * width) : stop - first * width] = True
+            rails[i] += int(((values == missing) & ~blank).sum())
+            values[blank] = missing
+            sums[i] += int(values.sum(dtype=np.int64))
+            if first == 0:
+                firsts[i] = int(values[0]) if len(values) else 0
+            columns.append(values.reshape(last - first, width))
+        stream.write(_packed(np.concatenate(columns, axis=1).reshape(-1), fmt))  # type: ignore[attr-defined]
+    return sums, firsts, rails
+
+
+def _integers(channel: Channel, calibration: Calibration, start: int, stop: int, missing: int) -> NDArray[np.int64]:
+    n = channel.n_samples
+    stored = channel.digital(min(start, n), min(stop, n))
+    if channel.calibration is None:
+        finite = np.isfinite(stored)
+        stored = np.where(finite, calibration.to_digital(np.where(finite, stored, 0.0)), missing)
+    values = np.full(stop - start, missing, dtype=np.int64)
+    values[: len(stored)] = stored
+    return values
+
+
+def _packed(values: NDArray[np.int64], fmt: str) -> bytes:
+    if fmt == "16":
+        return values.astype("<i2").tobytes()
+    if fmt == "32":
+        return values.astype("<i4").tobytes()
+    if fmt == "24":
+        return np.ascontiguousarray(values.astype("<i4").view(np.uint8).reshape(-1, 4)[:, :3]).tobytes()
+    if len(values) % 2:
+        values = np.append(values, 0)
+    low, high = values[0::2] & 0xFFF, values[1::2] & 0xFFF
+    triple = np.stack([low & 0xFF, (low >> 8) | ((high >> 8) << 4), high & 0xFF], axis=1)
+    return triple.astype(np.uint8).tobytes()
+
+
+def _number(value: float) -> str:
+    return repr(int(value)) if value == int(value) else repr(value)
+
+
+def _record_line(recording: Recording, name: str, frame_rate: Fraction, n_frames: int) -> str:
+    line = f"{name} {len(recording.channels)} {_number(float(frame_rate))} {n_frames}"
+    start = recording.start_time
+    if start is None:
+        return line
+    clock = start.strftime("%H:%M:%S") + (f".{start.microsecond:06d}".rstrip("0") if start.microsecond else "")
+    return f"{line} {clock} {start.strftime('%d/%m/%Y')}"
+
+
+def _signal_line(
+    channel: Channel, calibration: Calibration, file: str, fmt: str, width: int, frame_rate: Fraction, first: int, total: int
+) -> str:
+    gain, baseline = _gain(channel, calibration)
+    skew = round(-channel.start_s * float(frame_rate))
+    checksum = (total + 32768) % 65536 - 32768
+    unit = (channel.unit or "mV").replace("µ", "u").replace("₂", "2").replace(" ", "")
+    bits = {"212": 12, "16": 16, "24": 24, "32": 32}[fmt]
+    place = f"{file} {fmt}" + (f"x{width}" if width > 1 else "") + (f":{skew}" if skew > 0 else "")
+    return f"{place} {gain}({baseline})/{unit} {bits} 0 {first} {checksum} 0 {_plain(channel.label)}"
+
+
+def _plain(label: str) -> str:
+    return " ".join(label.replace("µ", "u").replace("₂", "2").encode("ascii", "replace").decode("ascii").split()) or "signal"
+
+
+def _gain(channel: Channel, calibration: Calibration) -> tuple[str, int]:
+    """Steps a unit as text, and the step of 0: the source's own where it came from WFDB."""
+    own, zero = channel.header.get("wfdb.gain"), channel.header.get("wfdb.baseline") or channel.header.get("wfdb.adczero") or "0"
+    scale = calibration.scale
+    baseline = round(calibration.digital_min - calibration.physical_min / scale)
+    if own is not None and abs(float(own) * scale - 1.0) < 1e-9 and int(zero) == baseline:
+        return own, baseline
+    return _number(float(f"{1.0 / scale:.12g}")), baseline
+
+
+def _kept(channel: Channel, calibration: Calibration, held: int, missing: int, rails: int) -> dict[str, str]:
+    """What a signal line cannot say, by key."""
+    gain, baseline = _gain(channel, calibration)
+    low, high = calibration.digital_min, calibration.digital_max
+    implied = Calibration(missing, -missing - 1, (missing - baseline) / float(gain), (-missing - 1 - baseline) / float(gain), missing)
+    travelling = ("edf.physical_min", "edf.physical_max", "edf.label", "edf.reserved")
+    kept = {key: value for key, value in channel.header.items() if key in travelling and value}
+    if channel.calibration is None or calibration != implied:
+        kept["limits"] = f"{low} {high} {calibration.physical_min!r} {calibration.physical_max!r}"
+    if calibration.missing is None and not len(channel.holes()):
+        kept["whole"] = "no sample is missing"
+    if rails:
+        kept["rail"] = f"{rails} samples of {missing} are values, not missing"
+    if held != channel.n_samples:
+        kept["n_samples"] = str(channel.n_samples)
+    if _plain(channel.label) != channel.label:
+        kept["label"] = channel.label
+    for key, value in (("transducer", channel.transducer), ("prefilter", channel.prefilter)):
+        if value:
+            kept[key] = value
+    return kept
