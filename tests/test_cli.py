@@ -317,8 +317,7 @@ def test_a_failure_while_writing_leaves_nothing(
     def fail(*_: object) -> None:
         raise failure
 
-    (tmp_path / "out").mkdir()
-    monkeypatch.setattr(Result, "_save_figure", fail)
+    monkeypatch.setattr(Result, "plot", fail)
     code = cli.main(["mark", str(edf), "--out", str(tmp_path / "out"), "-q"])
     assert code == (130 if isinstance(failure, KeyboardInterrupt) else 1)
     assert listing(tmp_path) == {}

@@ -23,6 +23,8 @@ _SIGNAL = (
     ("label", 16), ("transducer", 80), ("unit", 8), ("physical_min", 8), ("physical_max", 8), ("digital_min", 8), ("digital_max", 8),
     ("prefilter", 80), ("n_samples", 8), ("reserved", 32),
 )
+_NO_DATE = "01.01.85"
+"""What stands for an unknown date beside ``Startdate X``."""
 _MOST_SIGNALS = 4096
 MONTHS = ["JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC"]
 _PLAIN = str.maketrans({"µ": "u", "μ": "u", "₂": "2", "°": "d", "–": "-", "−": "-"})
@@ -70,7 +72,12 @@ class Header:
     @property
     def start_time(self) -> datetime | None:
         """Date and time of the header, whole seconds; None where they cannot be read as such."""
-        return _start_time(self.text)
+        return None if self.is_undated else _start_time(self.text)
+
+    @property
+    def is_undated(self) -> bool:
+        """The header says that the date is not known."""
+        return self.text["startdate"] == _NO_DATE and self.text["recording"].split()[:2] == ["Startdate", "X"]
 
 
 def read_header(path: Path) -> Header:

@@ -14,7 +14,7 @@ from caval.errors import FileError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_edf.header import Header, SignalHeader, read_header
-from caval_edf.tal import decode
+from caval_edf.tal import FILL, GAP, decode, hole_text
 
 __all__ = ["read_annotations", "read_edf"]
 
@@ -24,7 +24,7 @@ def read_edf(path: Path) -> Recording:
 
     Every signal keeps its own rate and its stored integers; header text that another format cannot hold stays in `header` under
     ``edf.`` names. Annotations of all annotation signals are in ``tracks["annotations"]``, on the clock of the first sample. Gaps
-    between the data records of EDF+D, and the gaps that caval's own writer notes (``BAD_CVP/gap``), are gaps of the channels.
+    between the data records of EDF+D, and those that caval's own writer notes (``BAD_CVP/gap``), are gaps of the channels.
 
     Raises
     ------
@@ -46,7 +46,9 @@ def read_edf(path: Path) -> Recording:
         position += signal.n_samples
     start = header.start_time
     start_time: datetime | None = None if start is None else start + timedelta(seconds=first_s)
-    notes = () if start is not None else (f"start {header.text['startdate']} {header.text['starttime']} is no date and time; left out",)
+    notes = ()
+    if start is None and not header.is_undated:
+        notes = (f"start {header.text['startdate']} {header.text['starttime']} is no date and time; left out",)
     main = {f"edf.{k}": header.text[k] for k in ("patient", "recording", "reserved", "record_duration", "startdate")}
     recording = Recording(path.stem, tuple(channels), start_time, {"annotations": track}, main, "edf", path, notes, (path,))
     return _with_noted_gaps(recording)
@@ -153,21 +155,21 @@ def _on_the_clock(
 
 
 def _with_noted_gaps(recording: Recording) -> Recording:
-    """Gaps that our writer noted as annotations back into the channels; a gap at the end is padding and shortens the channel."""
+    """Gaps that our writer noted as annotations back into the channels, and the fill of the last data record off their ends."""
     track = recording.tracks["annotations"]
     text = track.text
     noted = np.zeros(len(track), dtype=bool)
     channels = []
     for channel in recording.channels:
-        mine = text == f"BAD_{channel.label.upper()}/gap"
-        if mine.any():
-            noted |= mine
-            start = np.rint(track.onset_s[mine] * channel.sampling_rate).astype(np.int64)
-            stop = np.rint((track.onset_s[mine] + track.duration_s[mine]) * channel.sampling_rate).astype(np.int64)
-            count = channel.n_samples
-            if len(stop) and stop[-1] >= count:
-                count, start, stop = int(start[-1]), start[:-1], stop[:-1]
+        is_gap, is_fill = (text == hole_text(channel.label, kind) for kind in (GAP, FILL))
+        if is_gap.any() or is_fill.any():
+            noted |= is_gap | is_fill
+            start, stop, fill = (
+                np.rint(times * channel.sampling_rate).astype(np.int64)
+                for times in (track.onset_s[is_gap], (track.onset_s + track.duration_s)[is_gap], track.onset_s[is_fill])
+            )
             gaps = np.concatenate([channel.gaps, np.stack([start, stop], axis=1)])
+            count = int(min([channel.n_samples, *fill]))
             channel = replace(channel, n_samples=count, gaps=gaps[np.argsort(gaps[:, 0], kind="stable")])
         channels.append(channel)
     if not noted.any():

@@ -13,7 +13,15 @@ from numpy.typing import NDArray
 
 from caval.errors import FileError, InputError
 
-__all__ = ["decode", "encode", "seconds_text", "spread"]
+__all__ = ["FILL", "GAP", "decode", "encode", "hole_text", "seconds_text", "spread"]
+
+
+GAP, FILL = "gap", "fill"
+
+
+def hole_text(label: str, kind: str) -> str:
+    """Text that notes samples of a channel without a value: a gap, or the fill of the last data record."""
+    return f"BAD_{label.upper()}/{kind}"
 
 
 def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], list[float], list[float], list[str]]:

@@ -16,7 +16,7 @@ from caval.errors import FileError, InputError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_edf.header import MONTHS, ascii_field, number_field
-from caval_edf.tal import encode, spread
+from caval_edf.tal import FILL, GAP, encode, hole_text, spread
 
 __all__ = ["write_edf", "write_marked"]
 
@@ -31,8 +31,9 @@ def write_edf(recording: Recording, path: Path) -> tuple[Path, ...]:
     """Write an .edf (16 bit) or .bdf (24 bit) file with all channels at their own rates and all tracks as annotations.
 
     Stored integers and calibration limits are copied. A channel of floats gets a fixed range for its kind (pressures steps of
-    0.01 mmHg, ECG of 1 µV), ten times wider as often as the data need it. Gaps, missing values, and the samples that fill the last data
-    record up (the last value, repeated) are noted as annotations ``BAD_LABEL/gap``, which the reader turns back into gaps.
+    0.01 mmHg, ECG of 1 µV), ten times wider as often as the data need it. Gaps and missing values are noted as
+    annotations ``BAD_LABEL/gap``, and the samples that fill the last data record up (the last value, repeated) as ``BAD_LABEL/fill``;
+    the reader turns both back.
 
     Raises
     ------
@@ -132,18 +133,19 @@ def _plan(channel: Channel, per_record: int, sample_bytes: int) -> _Plan:
 
 
 def _gap_track(plans: list[_Plan], n_records: int) -> Track:
+    """What has no value: holes of the channels, and the fill of the last data record."""
     onset: list[float] = []
     lasts: list[float] = []
     text: list[str] = []
     for plan in plans:
-        channel = plan.channel
-        ranges = [tuple(r) for r in plan.holes]
-        if n_records * plan.per_record > channel.n_samples:
-            ranges.append((channel.n_samples, n_records * plan.per_record))
-        for start, stop in ranges:
+        channel, filled = plan.channel, n_records * plan.per_record
+        ranges = [(GAP, start, stop) for start, stop in plan.holes]
+        if filled > channel.n_samples:
+            ranges.append((FILL, channel.n_samples, filled))
+        for kind, start, stop in ranges:
             onset.append(start / channel.sampling_rate)
             lasts.append((stop - start) / channel.sampling_rate)
-            text.append(f"BAD_{channel.label.upper()}/gap")
+            text.append(hole_text(channel.label, kind))
     return Track.build(onset, text, duration_s=lasts if lasts else 0.0)
 
 

@@ -5,7 +5,7 @@ Research software, not a medical device: what it reports describes a recording a
 >>> import caval
 >>> result = caval.mark(caval.demo_recording(minutes=0.5))
 >>> sorted(result.marks["mark"].unique())
-['a', 'c', 'h', 'v', 'x', 'y', 'z']
+['a', 'c', 'v', 'x', 'y', 'z']
 """
 
 from __future__ import annotations

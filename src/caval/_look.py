@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -28,7 +27,6 @@ __all__ = ["print_installed", "print_record", "summary"]
 _PIECE_S = 5.0
 _PIECES = 120
 """Pieces of a channel that are read for its range: enough to see it, quick on any length."""
-_NOBODY = "\0"
 
 
 def print_record(recording: Recording, *, roles: Mapping[str, str], unit_of: Mapping[str, str]) -> None:
@@ -104,9 +102,7 @@ def _roles_found(recording: Recording, chosen: Mapping[str, str]) -> tuple[dict[
     except InputError as error:
         if "cvp" in chosen:
             raise
-        stand_in = Channel(_NOBODY, "mmHg", 1.0, 0, lambda start, stop: np.zeros(stop - start))
-        roles = assign_roles(replace(recording, channels=(*recording.channels, stand_in)), {**chosen, "cvp": _NOBODY})
-        return {role: label for role, label in roles.items() if label != _NOBODY}, str(error)
+        return assign_roles(recording, chosen, required=False), str(error)
 
 
 def _unusable_share(

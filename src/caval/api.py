@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from caval import registry, tables
+from caval._files import write_all
 from caval.errors import FileError, InputError
 from caval.pipeline import BLOCK_S, DETECTORS, STAGES, Pipeline, Progress
 from caval.recording import Recording
@@ -50,27 +51,26 @@ def read_track(path: str | Path) -> Track:
     return reader(path)
 
 
-def write(recording: Recording, path: str | Path) -> tuple[Path, ...]:
-    """Write signals and annotation tracks in the format of the file's ending; returns the paths written.
+def write(recording: Recording, path: str | Path, *, force: bool = False) -> tuple[Path, ...]:
+    """Write signals and annotation tracks in the format of the file's ending, all files or none; returns the paths written.
 
     Raises
     ------
     FileError
-        The file exists, or no format writes that ending.
+        A file exists and `force` is not set, it is the recording's own file, or no format writes that ending.
     InputError
         Something that the format cannot hold.
     """
     path = Path(path)
-    if path.exists():
-        raise FileError(f"{path} exists; give another name or remove it first")
     writer = registry.format_for(path, "write").write
     assert writer is not None
-    return writer(recording, path)
+    made = write_all(path.parent, lambda folder: writer(recording, folder / path.name), force=force, never=recording.path)
+    return tuple(made)
 
 
-def convert(source: str | Path, target: str | Path) -> tuple[Path, ...]:
-    """Read `source`, write `target`, formats by file ending: signals bit for bit, annotations included."""
-    return write(read(source), target)
+def convert(source: str | Path, target: str | Path, *, force: bool = False) -> tuple[Path, ...]:
+    """Read `source`, write `target`, formats by file ending: signals bit for bit, annotations included. As `write`."""
+    return write(read(source), target, force=force)
 
 
 def demo_recording(*, minutes: float = 2.0, seed: int = 1) -> Recording:

@@ -3,10 +3,7 @@
 from __future__ import annotations
 
 # ruff: noqa: ARG001 -- `debug` is read in `main`, before a command runs; it stands in each signature for the help
-import os
-import shutil
 import sys
-import tempfile
 import warnings
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -216,23 +213,8 @@ def convert(
 ) -> None:
     """Convert between formats by file ending: signals bit for bit, annotations included."""
     from caval import api
-    from caval.errors import FileError
-    from caval.result import _move_all
 
-    try:
-        scratch = Path(tempfile.mkdtemp(prefix=".caval-", dir=target.parent))
-    except OSError as error:
-        raise FileError(f"cannot write into {target.parent}: {error.strerror or error}") from error
-    try:
-        recording = api.read(source)
-        api.write(recording, scratch / target.name)
-        for name in sorted(path.name for path in scratch.iterdir()):
-            there = target.parent / name
-            if there.exists() and not force and not (recording.path and there.samefile(recording.path)):
-                raise FileError(f"{there} exists; use --force to overwrite, or give another name")
-        written = _move_all(scratch, target.parent, force=force, keep=recording.path)
-    finally:
-        shutil.rmtree(scratch, ignore_errors=True)
+    written = api.convert(source, target, force=force)
     if not quiet:
         for path in written:
             typer.echo(str(path))
@@ -248,9 +230,12 @@ def demo(
     """Invent a record, write it as EDF, mark it as `caval mark` would, and say what to look at."""
     from caval import api
 
-    out.mkdir(parents=True, exist_ok=True)
     record = out / "demo.edf"
-    _write_demo(record, minutes)
+    if record.exists() and not (out / "demo_run.json").exists():
+        from caval.errors import FileError
+
+        raise FileError(f"{record} exists and is not of an earlier demo; choose another --out")
+    api.write(api.demo_recording(minutes=minutes), record, force=True)
     with _progress(quiet) as progress:
         result = api.mark(record, progress=progress)
         written = result.write(out, table="csv", force=True)
@@ -262,21 +247,6 @@ def demo(
             f"{out / 'demo_spans.csv'} and carry no marks; the diathermy on the ECG costs no beat, because the arterial trace shows it.\n"
             f"Next: caval look {record}, then caval mark YOUR_RECORD --out DIR"
         )
-
-
-def _write_demo(record: Path, minutes: float) -> None:
-    """Write the invented record; a demo of an earlier run gives way, another file of that name does not."""
-    from caval import api
-    from caval.errors import FileError
-
-    scratch = Path(tempfile.mkdtemp(prefix=".caval-", dir=record.parent))
-    try:
-        api.write(api.demo_recording(minutes=minutes), scratch / record.name)
-        if record.exists() and not (record.parent / "demo_run.json").exists():
-            raise FileError(f"{record} exists and is not of an earlier demo; choose another --out")
-        os.replace(scratch / record.name, record)
-    finally:
-        shutil.rmtree(scratch, ignore_errors=True)
 
 
 @app.command(epilog=_epilog("caval stages"))

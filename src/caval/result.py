@@ -4,9 +4,6 @@ from __future__ import annotations
 
 import hashlib
 import json
-import os
-import shutil
-import tempfile
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -16,8 +13,10 @@ import pandas as pd
 
 import caval
 from caval import registry, tables
-from caval.errors import FileError, InputError
+from caval._files import write_all
+from caval.errors import InputError
 from caval.recording import Recording
+from caval.stages._picture import FEWEST
 from caval.track import Track
 
 if TYPE_CHECKING:
@@ -148,30 +147,17 @@ class Result:
             if writer.write_marked is None:
                 able = ", ".join(k for k, f in registry.formats().items() if f.value.write_marked is not None)
                 raise InputError(f"format {kind!r} holds no annotation track; allowed: {able}")
-        try:
-            directory.mkdir(parents=True, exist_ok=True)
-            scratch = Path(tempfile.mkdtemp(prefix=".caval-", dir=directory))
-        except OSError as error:
-            raise FileError(f"cannot write into {directory}: {error.strerror or error}") from error
-        try:
-            for name, rows in {"beats": self.beats, "marks": self.marks, "spans": self.spans, **self.others}.items():
-                _write_table(rows, scratch / f"{stem}_{name}.{table}")
-            for writer in writers:
-                writer.write_marked(self.recording, self.track, scratch, stem)
-            if figure:
-                self._save_figure(scratch / f"{stem}.png")
-            _write_json({**self.run, "input": _fingerprints(self.recording)}, scratch / f"{stem}_run.json")
-            return _move_all(scratch, directory, force=force, keep=self.recording.path)
-        except OSError as error:
-            if isinstance(error, FileError):
-                raise
-            raise FileError(f"cannot write into {directory}: {error.strerror or error}") from error
-        finally:
-            shutil.rmtree(scratch, ignore_errors=True)
 
-    def _save_figure(self, path: Path) -> None:
-        drawn = self.plot()
-        drawn.savefig(path)
+        def make(folder: Path) -> None:
+            for name, rows in {"beats": self.beats, "marks": self.marks, "spans": self.spans, **self.others}.items():
+                _write_table(rows, folder / f"{stem}_{name}.{table}")
+            for writer in writers:
+                writer.write_marked(self.recording, self.track, folder, stem)
+            if figure:
+                self.plot().savefig(folder / f"{stem}.png")
+            _write_json({**self.run, **_fingerprints(self.recording)}, folder / f"{stem}_run.json")
+
+        return write_all(directory, make, force=force, never=self.recording.path)
 
 
 def _statements(
@@ -180,17 +166,25 @@ def _statements(
     """What a reader must know that the tables do not shout."""
     said = list(recording.notes)
     if "ecg" not in roles:
-        beside = "the arterial trace" if "abp" in roles else "no other trace"
-        said.append(f"no ECG channel; beats rest on {beside}")
+        rest = "beats rest on the arterial trace alone" if "abp" in roles else "nor an arterial one: nothing to find beats on"
+        said.append(f"no ECG channel; {rest}" if "abp" in roles else f"no ECG channel, {rest}")
     if not len(beats):
         said.append("no beats found, so no marks")
     elif not len(marks):
-        cvp = spans[spans["channel"] == roles["cvp"]]
-        worst = cvp.groupby("kind")["duration_s"].sum().sort_values(ascending=False)
-        why = f"{roles['cvp']!r} is {worst.index[0]} for {worst.iloc[0]:.0f} s" if len(worst) else "no wave stands out of the noise"
-        detail = cvp.loc[cvp["kind"] == worst.index[0], "detail"].iloc[0] if len(worst) else ""
-        said.append(f"no marks: {why}{f' ({detail})' if detail else ''}")
+        said.append(f"no marks: {_why_no_marks(roles['cvp'], beats, spans)}")
     return tuple(said)
+
+
+def _why_no_marks(label: str, beats: pd.DataFrame, spans: pd.DataFrame) -> str:
+    mine = spans[spans["channel"] == label]
+    usable = int(beats["usable"].sum())
+    if len(mine) and not usable:
+        longest = mine.groupby("kind")["duration_s"].sum().sort_values(ascending=False)
+        detail = mine.loc[mine["kind"] == longest.index[0], "detail"].iloc[0]
+        return f"{label!r} cannot be read for {longest.iloc[0]:.0f} s: {longest.index[0]} ({detail})"
+    if usable < FEWEST:
+        return f"{usable} usable beats; the picture of the cardiac cycle that guides the marks needs {FEWEST} within a minute"
+    return "no wave stands out of the noise"
 
 
 def _write_table(rows: pd.DataFrame, path: Path) -> None:
@@ -208,23 +202,9 @@ def _fingerprints(recording: Recording) -> dict[str, Any]:
     """Name and SHA-256 of the input, and of each of its files; a record made in memory has none."""
     sums = {path.name: _sha256(path) for path in recording.files}
     name = recording.path.name if recording.path is not None else recording.name
-    return {"name": name, "sha256": sums.get(name), "files": sums}
+    return {"input": {"name": name, "sha256": sums.get(name)}, "files": sums}
 
 
 def _sha256(path: Path) -> str:
     with open(path, "rb") as stream:
         return hashlib.file_digest(stream, "sha256").hexdigest()
-
-
-def _move_all(scratch: Path, directory: Path, *, force: bool, keep: Path | None) -> list[Path]:
-    """Move finished files to their places; nothing moves when one of them is in the way."""
-    made = sorted(p for p in scratch.iterdir())
-    targets = [directory / p.name for p in made]
-    for target in targets:
-        if keep is not None and target.exists() and target.samefile(keep):
-            raise FileError(f"{target} is the input, which is never overwritten; choose another --out")
-        if target.exists() and not force:
-            raise FileError(f"{target} exists; use --force to overwrite, or another --out")
-    for source, target in zip(made, targets, strict=True):
-        os.replace(source, target)
-    return targets

@@ -44,7 +44,7 @@ def _rank(label: str, role: _Role) -> int | None:
     return None
 
 
-def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None) -> dict[str, str]:
+def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None, *, required: bool = True) -> dict[str, str]:
     """Label of the channel for every role that can be filled, ``{"cvp": "CVP", "ecg": "ECG II"}``.
 
     Parameters
@@ -52,6 +52,8 @@ def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None) 
     recording : Recording
     chosen : mapping of str to str, optional
         The user's word, role to label; it wins over the labels' own.
+    required : bool
+        Whether there must be a venous pressure, and one alone; else a doubtful ``cvp`` is left out.
 
     Raises
     ------
@@ -74,11 +76,13 @@ def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None) 
             and not (name == "ecg" and units.is_pressure_unit(channel.unit))
         ]
         if name == "cvp" and len({recording.labels[i] for _, i in ranked}) > 1:
+            if not required:
+                continue
             found = ", ".join(repr(recording.labels[i]) for _, i in ranked)
             raise InputError(f"more than one channel could be the venous pressure: {found}. Name one with --role cvp=LABEL")
         if ranked:
             roles[name] = recording.labels[min(ranked)[1]]
-    if "cvp" not in roles:
+    if "cvp" not in roles and required:
         listed = ", ".join(f"{c.label!r} ({c.unit or 'no unit'}, {c.sampling_rate:g} Hz)" for c in recording.channels)
         raise InputError(f"no venous-pressure channel in {recording.name!r}; there are: {listed or 'none'}. Name it with --role cvp=LABEL")
     return roles

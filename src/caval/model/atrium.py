@@ -119,9 +119,9 @@ class Explanation:
     volume_deviance, compliance_deviance : float64 array, shape (m,) and (n,)
         Profiles of `deviance` along either axis: the least over the other, looked for between grid points too.
     volume_range_ml, compliance_range_ml_per_mmhg : (float, float)
-        95 % profile intervals; at the edge of the grid where nothing bounds them (see `volume_is_bounded`, …).
-    volume_is_bounded, compliance_is_bounded : bool
-        Both ends of the interval come from what is known, not from the edge of the grid.
+        95 % profile intervals; they end at the limits of what is looked at where nothing else bounds them.
+    volume_bounds, compliance_bounds : (bool, bool)
+        Whether the lower and the upper end come from what is known, and not from the limits of what is looked at.
     known : tuple of str
         What narrowed it, in words.
     misfit : float
@@ -144,8 +144,8 @@ class Explanation:
     compliance_deviance: NDArray[np.float64]
     volume_range_ml: tuple[float, float]
     compliance_range_ml_per_mmhg: tuple[float, float]
-    volume_is_bounded: bool
-    compliance_is_bounded: bool
+    volume_bounds: tuple[bool, bool]
+    compliance_bounds: tuple[bool, bool]
     known: tuple[str, ...]
     misfit: float
     agrees: bool
@@ -153,8 +153,13 @@ class Explanation:
     statement: str
 
     @property
+    def is_bounded(self) -> bool:
+        """Volume and compliance are both bounded at both ends by what is known."""
+        return all((*self.volume_bounds, *self.compliance_bounds))
+
+    @property
     def best(self) -> tuple[float, float]:
-        """Volume (ml) and compliance (ml/mmHg) at the best point of the grid; of meaning only where both are bounded."""
+        """Volume (ml) and compliance (ml/mmHg) at the best point of the grid; of meaning only where `is_bounded`."""
         row, column = np.unravel_index(int(np.argmin(self.deviance)), self.deviance.shape)
         return float(self.volume_ml[column]), float(self.compliance_ml_per_mmhg[row])
 
@@ -295,6 +300,11 @@ def explain(
     points : int
         Grid points a side.
 
+    Notes
+    -----
+    Readings are taken as independent, and none as sharper than a standard deviation of half a percent. The regurgitant volume is taken as
+    all coming between the foot and the top of the wave.
+
     Raises
     ------
     InputError
@@ -316,22 +326,22 @@ def explain(
     total = trace + _together(on_volume, volume) + _together(on_compliance, compliance)[:, None]
     profiles = _profiles(height_mmhg, on_volume, on_compliance, volumes_ml, compliances_ml_per_mmhg, stiffening_per_ml)
     misfit = min(float(profile.min()) for _, profile, _ in profiles)
-    of_trace = [_ends(*p)[0] for p in _profiles(height_mmhg, (), (), volumes_ml, compliances_ml_per_mmhg, stiffening_per_ml)]
-    (volume_range, volume_bounded), (compliance_range, compliance_bounded) = (_ends(*p) for p in profiles)
+    of_trace = _trace_ranges(height_mmhg, volumes_ml, compliances_ml_per_mmhg, stiffening_per_ml)
+    (volume_range, volume_bounds), (compliance_range, compliance_bounds) = (_ends(*p) for p in profiles)
 
     from scipy.special import chdtri
 
     known = tuple(words for _, words in (*on_volume, *on_compliance))
     agrees = bool(misfit <= chdtri(max(len(known), 1), 0.01))
     statement = _statement(
-        wave, height_mmhg, known, volume_range, compliance_range, volume_bounded, compliance_bounded, agrees,
+        wave, height_mmhg, known, volume_range, compliance_range, volume_bounds, compliance_bounds, agrees,
         (volumes_ml, compliances_ml_per_mmhg), stiffening_per_ml > 0,
         adds=not np.allclose(of_trace, (volume_range, compliance_range), rtol=0.02),
     )
     on_grid = [np.interp(np.log(a), np.log(p[0]), p[1] - misfit) for a, p in zip((volume, compliance), profiles, strict=True)]
     return Explanation(
-        wave, height_mmhg, volume, compliance, np.maximum(total - misfit, 0.0), trace, on_grid[0], on_grid[1], volume_range, compliance_range,
-        volume_bounded, compliance_bounded, known, misfit, agrees, stiffening_per_ml, statement,
+        wave, height_mmhg, volume, compliance, np.maximum(total - misfit, 0.0), trace, on_grid[0], on_grid[1], volume_range,
+        compliance_range, volume_bounds, compliance_bounds, known, misfit, agrees, stiffening_per_ml, statement,
     )
 
 
@@ -355,8 +365,13 @@ def _check_question(
 
 
 def _reading(at: NDArray[np.float64], known: Interval) -> NDArray[np.float64]:
-    """-2 log L of a normal reading, 0 at its middle. An exact value is given the width of a hundredth of itself."""
-    return ((at - known.value) / max(known.sd, 0.005 * abs(known.value), 1e-6)) ** 2
+    """-2 log L of a normal reading, 0 at its middle."""
+    return ((at - known.value) / _width(known)) ** 2
+
+
+def _width(known: Interval) -> float:
+    """Standard deviation of a reading; nothing is taken as sharper than half a percent, which keeps it wider than the lines searched."""
+    return max(known.sd, 0.005 * abs(known.value), 1e-6)
 
 
 def _edge(at: NDArray[np.float64], bound: Interval, *, above: bool) -> NDArray[np.float64]:
@@ -426,6 +441,28 @@ def _challenge(compliance: NDArray[np.float64], challenge: Challenge) -> NDArray
     return result
 
 
+def _volume_of(height: NDArray[np.float64] | float, compliance: NDArray[np.float64] | float, k: float) -> NDArray[np.float64]:
+    """The volume that makes a wave of that height in that compliance, ml; k is the stiffening."""
+    return np.asarray(np.log1p(k * compliance * height) / k if k else compliance * height)
+
+
+def _compliance_of(height: NDArray[np.float64] | float, volume: NDArray[np.float64] | float, k: float) -> NDArray[np.float64]:
+    """The compliance in which a volume makes a wave of that height, ml/mmHg."""
+    return np.asarray(np.expm1(k * volume) / (k * height) if k else volume / height)
+
+
+def _trace_ranges(
+    height: Interval, volumes: tuple[float, float], compliances: tuple[float, float], k: float
+) -> tuple[tuple[float, float], tuple[float, float]]:
+    """Volumes and compliances that the height alone leaves of what is looked at, at 95 %."""
+    half = _width(height) * _normal_quantile(0.95)
+    low, high = max(height.value - half, 1e-9), height.value + half
+    return (
+        (max(volumes[0], float(_volume_of(low, compliances[0], k))), min(volumes[1], float(_volume_of(high, compliances[1], k)))),
+        (max(compliances[0], float(_compliance_of(high, volumes[0], k))), min(compliances[1], float(_compliance_of(low, volumes[1], k)))),
+    )
+
+
 def _profiles(
     height: Interval, on_volume: Sequence[_Evidence], on_compliance: Sequence[_Evidence], volumes: tuple[float, float],
     compliances: tuple[float, float], k: float,
@@ -435,12 +472,11 @@ def _profiles(
     Along either axis the other is found from the height: evidence is of one or the other, so the best height is looked for on a fine line,
     and no ridge falls between the points of a grid.
     """
-    spread = np.linspace(-6, 6, 193) * height.sd
+    spread = np.linspace(-6, 6, 145) * _width(height)
     heights = (height.value + spread)[height.value + spread > 0]
     cost = _reading(heights, height)
-    volume, compliance = np.geomspace(*volumes, 3001)[:, None], np.geomspace(*compliances, 3001)[:, None]
-    of_volume = np.expm1(k * volume) / (k * heights) if k else volume / heights  # the compliance that goes with a volume and a height
-    of_compliance = np.log1p(k * compliance * heights) / k if k else compliance * heights
+    volume, compliance = np.geomspace(*volumes, 1501)[:, None], np.geomspace(*compliances, 1501)[:, None]
+    of_volume, of_compliance = _compliance_of(heights, volume, k), _volume_of(heights, compliance, k)
     along = []
     for axis, here, there, other, limits in (
         (volume, on_volume, on_compliance, of_volume, compliances), (compliance, on_compliance, on_volume, of_compliance, volumes),
@@ -452,8 +488,10 @@ def _profiles(
     return along
 
 
-def _ends(axis: NDArray[np.float64], profile: NDArray[np.float64], free: NDArray[np.float64]) -> tuple[tuple[float, float], bool]:
-    """Ends of the 95 % profile interval, and whether both are there for other reasons than the limits of what is looked at."""
+def _ends(
+    axis: NDArray[np.float64], profile: NDArray[np.float64], free: NDArray[np.float64]
+) -> tuple[tuple[float, float], tuple[bool, bool]]:
+    """Ends of the 95 % profile interval, and whether each is there for another reason than the limits of what is looked at."""
     limit = float(profile.min()) + cutoff(0.95)
     anywhere = np.flatnonzero(free <= float(free.min()) + cutoff(0.95))
     inside = np.flatnonzero(profile <= limit)
@@ -464,32 +502,34 @@ def _ends(axis: NDArray[np.float64], profile: NDArray[np.float64], free: NDArray
             continue
         share = (limit - profile[here]) / (profile[out] - profile[here])
         ends.append(float(np.exp(log[here] + (log[out] - log[here]) * share)))
-    return (ends[0], ends[1]), bool(anywhere[0] > 0 and anywhere[-1] < len(axis) - 1)
+    return (ends[0], ends[1]), (bool(anywhere[0] > 0), bool(anywhere[-1] < len(axis) - 1))
 
 
 def _statement(
-    wave: str, height: Interval, known: Sequence[str], volume: tuple[float, float], compliance: tuple[float, float], volume_bounded: bool,
-    compliance_bounded: bool, agrees: bool, asked: tuple[tuple[float, float], tuple[float, float]], stiffens: bool, *,
-    adds: bool,
+    wave: str, height: Interval, known: Sequence[str], volume: tuple[float, float], compliance: tuple[float, float],
+    volume_bounds: tuple[bool, bool], compliance_bounds: tuple[bool, bool], agrees: bool,
+    asked: tuple[tuple[float, float], tuple[float, float]], stiffens: bool, *, adds: bool,
 ) -> str:
     what = f"{'an' if wave == 'a' else 'a'} {wave} wave of {_text(height)} mmHg"
-    volumes, compliances = f"{_to(*volume)} ml", f"{_to(*compliance)} ml/mmHg"
+    pairs = f"volumes of {_to(*volume)} ml with compliances of {_to(*compliance)} ml/mmHg"
     at_foot = ", compliance being that at the foot of the wave" if stiffens else ""
     looked = f" (within the {_to(*asked[0])} ml and {_to(*asked[1])} ml/mmHg looked at{at_foot})"
     if not known:
-        return f"The trace alone does not say: volumes of {volumes} with compliances of {compliances} all explain {what}{looked}."
+        return f"The trace alone does not say: {pairs} all explain {what}{looked}."
     given = "; ".join(known)
-    if not adds:
-        return f"Neither the trace nor {given} says: volumes of {volumes} with compliances of {compliances} all explain {what}{looked}."
     if not agrees:
         return f"What is known does not fit together with {what}: {given}. One of the readings, or the model, is wrong."
-    pairs = f"volumes of {volumes} with compliances of {compliances} explain {what}"
-    if volume_bounded and compliance_bounded:
+    if not adds:
+        return f"Neither the trace nor {given} says: {pairs} all explain {what}{looked}."
+    if all((*volume_bounds, *compliance_bounds)):
         narrow = volume[1] / volume[0] < 3 and compliance[1] / compliance[0] < 3
-        return f"With {given}: {pairs}{'' if narrow else '; that is a wide range, and says little about either'}."
-    open_ = " and ".join(n for n, bounded in (("volume", volume_bounded), ("compliance", compliance_bounded)) if not bounded)
-    stay = "stay" if " and " in open_ else "stays"
-    return f"With {given}, the {open_} {stay} open at one end or both: {pairs}{looked}."
+        return f"With {given}: {pairs} explain {what}{'' if narrow else '; that is a wide range, and says little about either'}."
+    open_ends = []
+    for side, volume_bounded, compliance_bounded in zip(("below", "above"), volume_bounds, compliance_bounds, strict=True):
+        if not (volume_bounded and compliance_bounded):
+            name = "the compliance" if volume_bounded else "the volume" if compliance_bounded else "either"
+            open_ends.append(f"{name} from {side}")
+    return f"With {given}: {pairs} explain {what}; nothing known bounds {' or '.join(open_ends)}{looked}."
 
 
 def _to(low: float, high: float) -> str:

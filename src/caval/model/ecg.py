@@ -48,8 +48,8 @@ _T = _Wave.of(90, 0.75, 0.4)
 _P = _Wave(0.055, _Wave.of(0, 1.2, 0.17).height, 0.17 * _TURN_S)
 _P_RETROGRADE = _Wave(0.045, -0.8 * _P.height, 0.8 * _P.width_s)  # runs away from lead II, through less of the atrium at a time
 # Beats that start in a ventricle: our choice of shape, after the look of such beats in lead II. The shoulder before R and the S after it
-# pull the peak forward by 4.4 ms, which is put right here, so that it stands at 0.
-_WIDE_QRS = (_Wave(-0.0406, 0.25, 0.022), _Wave(0.0044, 1.15, 0.030), _Wave(0.0844, -0.35, 0.028))
+# pull the peak forward by 3.1 ms, which is put right here, so that it stands at 0.
+_WIDE_QRS = (_Wave(-0.0419, 0.25, 0.022), _Wave(0.0031, 1.15, 0.030), _Wave(0.0831, -0.35, 0.028))
 _WIDE_T = _Wave(0.32, -0.40, 0.060)
 _WIDE = ("premature", "paced", "escape")
 _SPIKE_LEAD_S = 0.10

@@ -198,7 +198,7 @@ class Diathermy(Event):
 
 _SPAN_KIND: dict[type[Event], str] = {
     Flush: "flush", Zeroing: "zeroing", BloodSampling: "sampling", Disconnection: "disconnected", Clot: "damped",
-    HeightStep: "level_change", Movement: "noise", Diathermy: "noise",
+    HeightStep: "level_change", Movement: "noise",
 }
 
 
@@ -445,7 +445,9 @@ def _movement(time: NDArray, rate: float, events: Sequence[Event], rng: np.rando
 
 
 def _spans(events: Sequence[Event], line: Line, channel: str) -> pd.DataFrame:
-    settling = np.log(300 / 0.5) / (2 * np.pi * line.natural_frequency_hz * min(line.damping, 1 / line.damping))  # 300 mmHg down to 0.5
+    zeta = line.damping
+    slowest = zeta if zeta < 1 else zeta - np.sqrt(zeta**2 - 1)  # of the poles, in units of ω
+    settling = np.log(300 / 0.5) / (2 * np.pi * line.natural_frequency_hz * slowest)  # 300 mmHg down to 0.5
     rows = []
     for event in events:
         after = line.low_frequency_delay_s
@@ -539,7 +541,7 @@ def find_ring(
     longest_s : float
         How long the ring is looked for.
     smallest_mmhg : float
-        The ring ends where the trace stays within this of its level (or within 3 % of its height): the pulse goes on underneath.
+        Swings below it are lost in the pulse, which goes on underneath; the ring is read until a quarter of it is left.
 
     Returns
     -------
@@ -554,24 +556,40 @@ def find_ring(
     from every sample that is not cut, so that a pulse underneath or few samples a period matter less. A linear monitor filter changes the
     height of a free ring and neither its frequency nor its decay.
     """
-    from scipy.optimize import least_squares
-
     values = np.asarray(values, dtype=np.float64)
     start, stop = max(round(released_s * sampling_rate), 0), round((released_s + longest_s) * sampling_rate)
     part = values[start:stop]
     if len(part) < 8:
         return None
     level = float(np.median(part[len(part) // 2 :]))
-    whole = ~_cut(part, values)
+    whole = (part > values.min()) & (part < values.max())  # the monitor may have cut what stands at the limits of the trace
     away = np.abs(part - level)
     height = float(away[whole].max(initial=0.0))
     if height < 2.5 * smallest_mmhg:
         return None
-    still = np.flatnonzero(away > max(0.03 * height, smallest_mmhg))[-1] + 1 + round(0.03 * sampling_rate)
-    whole[still:] = False
-    if whole.sum() < 8:
+    still = int(np.flatnonzero(away > max(0.03 * height, smallest_mmhg))[-1]) + 1
+    at: NDArray[np.float64] | None = None
+    for _ in range(3):  # the end of the ring by eye, then by its own decay
+        time = np.flatnonzero(whole[:still]) / sampling_rate
+        if len(time) < 8:
+            return None
+        at = _fit_ring(time, part[:still][whole[:still]], 0.5 * sampling_rate, at)
+        omega, zeta = 2 * np.pi * np.exp(at[0]), at[1]
+        lasts_s = max(np.log(4 * height / smallest_mmhg) / (zeta * omega), 2 * np.pi * 1.25 / omega)
+        still = min(len(part), round(lasts_s * sampling_rate))
+    if at is None or at[1] > 0.8:
         return None
-    time, heard = np.flatnonzero(whole) / sampling_rate, part[whole]
+    f_n, zeta = float(np.exp(at[0])), float(at[1])
+    ring_hz = f_n * float(np.sqrt(1 - zeta**2))
+    ratio = float(np.exp(-np.pi * zeta / np.sqrt(1 - zeta**2)))
+    swings = int(np.log(height / smallest_mmhg) / (zeta * 2 * np.pi * f_n) * 2 * ring_hz)
+    return Ring(ring_hz, ratio, swings, f_n, zeta)
+
+
+def _fit_ring(time: NDArray, heard: NDArray, highest_hz: float, start: NDArray | None) -> NDArray[np.float64]:
+    """``(log f_n, ζ)`` of the free ring, on a curved level, that is nearest to what was heard."""
+    from scipy.optimize import least_squares
+
     centred = time - time.mean()
 
     def left_over(at: NDArray) -> NDArray[np.float64]:
@@ -581,24 +599,13 @@ def find_ring(
         rest: NDArray[np.float64] = heard - basis @ np.linalg.lstsq(basis, heard, rcond=None)[0]
         return rest
 
-    tried = [(np.log(f), z) for f in np.geomspace(2.0, min(60.0, 0.45 * sampling_rate), 28) for z in (0.06, 0.12, 0.22, 0.35, 0.55)]
-    first = min(tried, key=lambda at: float(np.sum(left_over(np.array(at)) ** 2)))
-    fit = least_squares(left_over, first, bounds=([np.log(0.5), 0.005], [np.log(0.5 * sampling_rate), 0.95]), x_scale=[0.05, 0.02])
-    f_n, zeta = float(np.exp(fit.x[0])), float(fit.x[1])
-    if zeta > 0.8:
-        return None
-    ring_hz = f_n * float(np.sqrt(1 - zeta**2))
-    ratio = float(np.exp(-np.pi * zeta / np.sqrt(1 - zeta**2)))
-    return Ring(ring_hz, ratio, int(2 * ring_hz * time[-1]), f_n, zeta)
-
-
-def _cut(part: NDArray, values: NDArray) -> NDArray[np.bool_]:
-    """Samples of `part` that stand at the limit of the trace: its least or greatest value, when it occurs more than once."""
-    cut = np.zeros(len(part), dtype=bool)
-    for edge in (values.min(), values.max()):
-        if np.count_nonzero(values == edge) > 1:
-            cut |= part == edge
-    return cut
+    if start is None:
+        frequencies = np.log(np.geomspace(2.0, min(60.0, 0.9 * highest_hz), 28))
+        tried = [np.array([f, z]) for f in frequencies for z in (0.06, 0.12, 0.22, 0.35, 0.55)]
+        start = min(tried, key=lambda at: float(np.sum(left_over(at) ** 2)))
+    bounds = ([np.log(0.5), 0.005], [np.log(highest_hz), 0.95])
+    found: NDArray[np.float64] = least_squares(left_over, start, bounds=bounds, x_scale=[0.05, 0.02]).x
+    return np.clip(found, [np.log(0.51), 0.006], [np.log(0.99 * highest_hz), 0.94])
 
 
 # ---------------------------------------------------------------------------------------------------------------- on the ECG

@@ -168,7 +168,8 @@ def _truth(
         good = (np.abs(best * step - place) < 0.06) & (place > 0) & (place < time[-1])
         found = {"time_s": best[good] * step, "mark": wave, "beat": np.flatnonzero(good), "pressure_mmhg": clean[best[good]]}
         rows.append(pd.DataFrame(found))
-    return pd.concat(rows).sort_values("time_s", kind="stable", ignore_index=True)
+    empty = pd.DataFrame({"time_s": [], "mark": [], "beat": [], "pressure_mmhg": []}).astype({"mark": object, "beat": np.int64})
+    return pd.concat(rows or [empty]).sort_values("time_s", kind="stable", ignore_index=True)
 
 
 def _spoil(ecg: NDArray, ecg_rate: float, cvp: NDArray, rate: float, duration_s: float, rng: np.random.Generator) -> None:

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from textwrap import fill
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from caval.model.atrium import Explanation, cutoff, wave_height
 from caval.report import _ink
@@ -28,9 +28,9 @@ def atrium_figure(explanation: Explanation, *, title: str = "", truth: tuple[flo
     """Draw what explains a wave.
 
     The main panel has volume moved across and effective compliance up, both in equal ratios, so that pairs of one wave height lie on a
-    line; thin lines are heights in mmHg. Grey is what the trace alone allows at 95 %; colour is what is left with all that is known, at 50,
-    80 and 95 %. The curves in the margins are profile likelihoods along either axis, grey of what else is known and coloured of
-    everything together, with the 95 % range underneath.
+    line; thin lines are heights in mmHg. Grey is what the trace alone allows at 95 %, the dashed outline what all else that is known
+    allows; colour is what both leave, at 50, 80 and 95 %. The curves in the margins are profile likelihoods along either axis, dashed of
+    what else is known and coloured of everything together, with the 95 % range underneath.
 
     Parameters
     ----------
@@ -51,12 +51,13 @@ def atrium_figure(explanation: Explanation, *, title: str = "", truth: tuple[flo
     drawn = Figure(figsize=(8.6, 8.6), dpi=120, facecolor="white")
     FigureCanvasAgg(drawn)
     grid = drawn.add_gridspec(
-        2, 2, width_ratios=[1, 0.19], height_ratios=[0.19, 1], left=0.095, right=0.975, top=0.875, bottom=0.105, wspace=0.035, hspace=0.035,
+        2, 2, width_ratios=[1, 0.19], height_ratios=[0.19, 1], left=0.095, right=0.975, top=0.865, bottom=0.105, wspace=0.035, hspace=0.035,
     )
     main = drawn.add_subplot(grid[1, 0])
     above, beside = drawn.add_subplot(grid[0, 0], sharex=main), drawn.add_subplot(grid[1, 1], sharey=main)
     color = WAVES[explanation.wave].color
     _draw_pairs(main, explanation, color)
+    told = color if explanation.agrees else ""
     if truth is not None:
         main.plot(*truth, marker="x", color=_ink.INK, markersize=9, markeredgewidth=2.0, zorder=6)
         main.annotate(
@@ -65,11 +66,11 @@ def atrium_figure(explanation: Explanation, *, title: str = "", truth: tuple[flo
     others = explanation.deviance - explanation.trace_deviance
     _draw_margin(
         above, explanation.volume_ml, explanation.volume_deviance, others.min(axis=0), explanation.volume_range_ml,
-        explanation.volume_is_bounded, "ml", color, upright=False,
+        explanation.volume_bounds, "ml", told, upright=False,
     )
     _draw_margin(
         beside, explanation.compliance_ml_per_mmhg, explanation.compliance_deviance, others.min(axis=1),
-        explanation.compliance_range_ml_per_mmhg, explanation.compliance_is_bounded, "ml/mmHg", color, upright=True,
+        explanation.compliance_range_ml_per_mmhg, explanation.compliance_bounds, "ml/mmHg", told, upright=True,
     )
     head = title or f"What volume, into what compliance, makes this {explanation.wave} wave?"
     drawn.text(0.095, 0.972, head, fontsize=13.5, fontweight="bold", color=_ink.INK, ha="left", va="top")
@@ -85,8 +86,9 @@ def _draw_pairs(ax: Axes, explanation: Explanation, color: str) -> None:
     volume, compliance = explanation.volume_ml, explanation.compliance_ml_per_mmhg
     ax.set_xscale("log")
     ax.set_yscale("log")
-    ax.set_xlim(*_seen(volume, explanation.volume_range_ml, explanation.volume_is_bounded))
-    ax.set_ylim(*_seen(compliance, explanation.compliance_range_ml_per_mmhg, explanation.compliance_is_bounded))
+    near = explanation.is_bounded and explanation.agrees
+    ax.set_xlim(*_seen(volume, explanation.volume_range_ml, near))
+    ax.set_ylim(*_seen(compliance, explanation.compliance_range_ml_per_mmhg, near))
     _ink.plain(ax, grid="both")
     for axis in (ax.xaxis, ax.yaxis):
         axis.set_major_locator(LogLocator(subs=(1, 2, 5)))
@@ -98,6 +100,10 @@ def _draw_pairs(ax: Axes, explanation: Explanation, color: str) -> None:
     away = np.clip((height - explanation.height_mmhg.value) / explanation.height_mmhg.sd, -9, 9)  # signed, so that its contours are smooth
     ax.contourf(seen_volume, seen_compliance, away, levels=[-edge, edge], colors=["#D5DBE1"], antialiased=True, zorder=1.5)
     total = np.sqrt(explanation.deviance)
+    if explanation.known:
+        others = explanation.deviance - explanation.trace_deviance
+        others = np.sqrt(np.maximum(others - others.min(), 0))
+        ax.contour(volume, compliance, others, levels=[edge], colors=[_ink.SOFT], linewidths=1.1, linestyles=[(0, (4, 2))], zorder=2.2)
     if explanation.agrees and explanation.known:
         inner = 0.0
         for level, alpha in zip(_LEVELS, _ALPHAS, strict=True):
@@ -144,35 +150,37 @@ def _draw_heights(ax: Axes, explanation: Explanation) -> None:
 
 def _draw_margin(
     ax: Axes, axis: NDArray[np.float64], profile: NDArray[np.float64], others: NDArray[np.float64], ends: tuple[float, float],
-    bounded: bool, unit: str, color: str, *, upright: bool,
+    bounds: tuple[bool, bool], unit: str, color: str, *, upright: bool,
 ) -> None:
-    """Profile likelihood along one axis, with its 95 % range; `upright` for the axis that goes up."""
-    everything = np.exp(-0.5 * (profile - profile.min()))
+    """Profile likelihood along one axis, with its 95 % range; `upright` for the axis that goes up. No colour where nothing fits."""
+
+    def turned(along: ArrayLike, across: ArrayLike) -> tuple[ArrayLike, ArrayLike]:
+        return (across, along) if upright else (along, across)
+
     known = np.exp(-0.5 * (others - others.min()))
-    flat = bool(known.min() > 0.999)
-    bar = -0.16
-    if upright:
-        ax.fill_betweenx(axis, 0, everything, color=color, alpha=0.25, linewidth=0)
-        ax.plot(everything, axis, color=_ink.dark(color), linewidth=1.4)
-        if not flat:
-            ax.plot(known, axis, color=_ink.SOFT, linewidth=1.1, linestyle=(0, (4, 2)))
-        ax.plot([bar, bar], ends, color=_ink.dark(color), linewidth=3.2, solid_capstyle="butt")
-        ax.set_xlim(-0.30, 1.45)
-    else:
-        ax.fill_between(axis, 0, everything, color=color, alpha=0.25, linewidth=0)
-        ax.plot(axis, everything, color=_ink.dark(color), linewidth=1.4)
-        if not flat:
-            ax.plot(axis, known, color=_ink.SOFT, linewidth=1.1, linestyle=(0, (4, 2)))
-        ax.plot(ends, [bar, bar], color=_ink.dark(color), linewidth=3.2, solid_capstyle="butt")
-        ax.set_ylim(-0.30, 1.45)
+    if color:
+        everything = np.exp(-0.5 * (profile - profile.min()))
+        fill_between = ax.fill_betweenx if upright else ax.fill_between
+        fill_between(axis, 0, everything, color=color, alpha=0.25, linewidth=0)
+        ax.plot(*turned(axis, everything), color=_ink.dark(color), linewidth=1.4)
+        ax.plot(*turned(ends, [-0.16, -0.16]), color=_ink.dark(color), linewidth=3.2, solid_capstyle="butt")
+    if known.min() < 0.999:
+        ax.plot(*turned(axis, known), color=_ink.SOFT, linewidth=1.1, linestyle=(0, (4, 2)))
+    (ax.set_xlim if upright else ax.set_ylim)(-0.30, 1.45)
     ax.axis("off")
-    words = f"{_whole(ends[0])}–{_whole(ends[1])} {unit}" if bounded else "not bounded"
-    middle = float(np.sqrt(np.prod(ends if bounded else (axis[0], axis[-1]))))
-    style: dict[str, Any] = {"fontsize": 9.5, "fontweight": "bold", "color": _ink.dark(color), "ha": "center", "va": "center"}
-    if upright:
-        ax.text(1.28, middle, words, rotation=-90, **style)
-    else:
-        ax.text(middle, 1.28, words, **style)
+    words, low, high = "not bounded", axis[0], axis[-1]
+    if not color:
+        words = "nothing fits"
+    elif all(bounds):
+        words, (low, high) = f"{_whole(ends[0])}–{_whole(ends[1])} {unit}", ends
+    elif any(bounds):
+        words, (low, high) = f"above {_whole(ends[0])} {unit}" if bounds[0] else f"below {_whole(ends[1])} {unit}", ends
+    middle = float(np.sqrt(low * high))
+    x, y = (1.28, middle) if upright else (middle, 1.28)
+    ax.text(
+        x, y, words, rotation=-90 if upright else 0, fontsize=9.5, fontweight="bold", ha="center",
+        va="center", color=_ink.dark(color) if color else _ink.SOFT,
+    )
 
 
 def _whole(value: float) -> str:
@@ -189,7 +197,8 @@ def _write_legend(ax: Axes, explanation: Explanation, color: str) -> None:
             Patch(facecolor=color, alpha=alpha, label=f"all that is known, {100 * level:g} %")
             for level, alpha in zip(_LEVELS[::-1], _ALPHAS[::-1], strict=True)
         ]
-        handles.append(Line2D([], [], color=_ink.SOFT, linestyle=(0, (4, 2)), linewidth=1.1, label="without the trace (margins)"))
+    if explanation.known:
+        handles.append(Line2D([], [], color=_ink.SOFT, linestyle=(0, (4, 2)), linewidth=1.1, label="known without the trace, 95 %"))
     ax.legend(
         handles=handles, loc="upper left", frameon=True, framealpha=0.94, edgecolor="none", fontsize=8.5, labelcolor=_ink.INK,
         title="pairs that explain the wave", title_fontproperties={"size": 8.5, "weight": "bold"}, alignment="left",

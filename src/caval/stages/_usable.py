@@ -27,7 +27,7 @@ def usable_beats(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame) -> tuple
     """For each beat whether its venous trace can be read, and the reason when not (``""`` when it can)."""
     r = beats["r_time_s"].to_numpy(float)
     starts, stops = r - BEFORE_R_S, beat_stops(r)
-    bad = spans[(spans["channel"] == cvp.label) & spans["kind"].map(lambda k: k not in SPANS or SPANS[k].unusable)]
+    bad = spans[(spans["channel"] == cvp.label) & ~spans["kind"].isin([k for k, term in SPANS.items() if not term.unusable])]
     row = overlaps(starts, np.minimum(stops, r + 0.8), bad)
     reason = np.append(bad["kind"].to_numpy(object), "")[row]
     outside = (r < cvp.start_s) | (r + 0.3 > cvp.stop_s)

@@ -37,8 +37,11 @@ def measure(cvp: Signal, beats: pd.DataFrame, marks: pd.DataFrame, spans: pd.Dat
     r = beats["r_time_s"].to_numpy(float)
     if not len(r):
         return tables.empty("readings")
-    values, missing = fill(cvp.values)
     usable, reason = usable_beats(cvp, beats, spans)
+    if len(cvp) < 2:
+        blank = {"x_pre_mmhg": np.nan, "mean_mmhg": np.nan}
+        return pd.DataFrame({"beat": beats["beat"].to_numpy(), "r_time_s": r, "usable": usable, "reason": reason, **blank})
+    values, missing = fill(cvp.values)
     smooth = Signal(lowpass(values, cvp.sampling_rate, smooth_hz), cvp.sampling_rate, cvp.start_s)
     following = np.append(r[1:], np.nan)
     mean = np.where(usable & (following - r < 3.0), _mean_between(values, missing, cvp, r, following), np.nan)
