@@ -74,7 +74,7 @@ def atrium_figure(explanation: Explanation, *, title: str = "", truth: tuple[flo
     )
     head = title or f"What volume, into what compliance, makes this {explanation.wave} wave?"
     drawn.text(0.095, 0.972, head, fontsize=13.5, fontweight="bold", color=_ink.INK, ha="left", va="top")
-    drawn.text(0.095, 0.937, fill(explanation.statement, 112), fontsize=9.2, color=_ink.INK, ha="left", va="top", linespacing=1.4)
+    drawn.text(0.095, 0.937, fill(explanation.statement, 106), fontsize=9.2, color=_ink.INK, ha="left", va="top", linespacing=1.4)
     _write_legend(main, explanation, color)
     drawn.text(0.095, 0.014, FOOTER, fontsize=7.5, color=_ink.SOFT, ha="left", va="bottom")
     return drawn
