@@ -1,0 +1,200 @@
+"""Parameters of the circulation, each with its unit, its allowed range and where its value comes from.
+
+Base set: the 21-compartment model of Heldt et al., J Appl Physiol 2002;92:1239 (doi 10.1152/japplphysiol.00241.2001), as condensed in
+secondary sources: resistances, compliances, unstressed volumes, chamber volumes and the ventricles' elastances. Borrowed: valves from
+Mynard et al., Int J Numer Meth Biomed Engng 2012;28:626; pericardium from Mynard and Smolich, Ann Biomed Eng 2015;43:1443;
+ventricular activation from Stergiopulos et al., Am J Physiol 1996;270:H2050. What was changed so that the healthy adult meets normal values
+is called calibrated.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import Field, dataclass, field, fields, is_dataclass, replace
+from typing import Any
+
+from caval.errors import InputError
+
+__all__ = ["PRESETS", "Chamber", "Circulation", "Heart", "Pericardium", "Valve", "Vessel", "preset"]
+
+_HELDT = "Heldt 2002"
+_MYNARD = "Mynard 2012"
+
+
+def _value(default: float, low: float, high: float, unit: str, source: str) -> Any:
+    """A field with its allowed range, unit and source."""
+    return field(default=default, metadata={"low": low, "high": high, "unit": unit, "source": source})
+
+
+@dataclass(frozen=True)
+class Chamber:
+    """A chamber of the heart: transmural pressure is elastance times the volume above `v0_ml`, more steeply so where `stiffness` is set."""
+
+    v0_ml: float = _value(14.0, 0.0, 200.0, "ml", _HELDT)
+    e_rest: float = _value(0.2, 0.005, 5.0, "mmHg/ml", _HELDT)
+    e_peak: float = _value(0.5, 0.005, 20.0, "mmHg/ml", _HELDT)
+    stiffness: float = _value(0.0, 0.0, 0.2, "1/ml", "exponential stiffening at rest, 0 for a straight line; from memory")
+
+    @classmethod
+    def of(cls, v0_ml: float, e_rest: float, e_peak: float) -> Chamber:
+        return cls(v0_ml, e_rest, e_peak)
+
+
+@dataclass(frozen=True)
+class Vessel:
+    """A compartment: resistance of its outflow, compliance, unstressed volume."""
+
+    r: float = _value(0.1, 1e-4, 100.0, "mmHg·s/ml", _HELDT)
+    c: float = _value(1.0, 0.01, 500.0, "ml/mmHg", _HELDT)
+    v0_ml: float = _value(100.0, 0.0, 5000.0, "ml", _HELDT)
+
+
+@dataclass(frozen=True)
+class Valve:
+    """A valve with inertia whose opening follows the pressure across it. `a_min_cm2` above 0 leaks; a small `a_max_cm2` obstructs."""
+
+    a_max_cm2: float = _value(8.0, 0.1, 20.0, "cm²", _MYNARD)
+    a_min_cm2: float = _value(0.0, 0.0, 5.0, "cm²", _MYNARD)
+    opening: float = _value(40.0, 0.1, 1000.0, "1/(mmHg·s)", _MYNARD)
+    closing: float = _value(53.0, 0.1, 1000.0, "1/(mmHg·s)", _MYNARD)
+    length_cm: float = _value(1.5, 0.1, 10.0, "cm", "from memory")
+
+
+@dataclass(frozen=True)
+class Pericardium:
+    """Pressure k·exp((V − v0)/φ) on the whole heart; V counts the blood in the four chambers, the muscle and the fluid."""
+
+    k_mmhg: float = _value(0.5, 0.0, 50.0, "mmHg", "Mynard & Smolich 2015")
+    v0_ml: float = _value(641.0, 50.0, 2000.0, "ml", "Mynard & Smolich 2015")
+    phi_ml: float = _value(40.0, 1.0, 500.0, "ml", "Mynard & Smolich 2015")
+    muscle_ml: float = _value(260.0, 0.0, 1000.0, "ml", "from memory")
+    fluid_ml: float = _value(20.0, 0.0, 2000.0, "ml", "from memory; an effusion adds to it")
+
+
+@dataclass(frozen=True)
+class Heart:
+    """Timing, and what the ventricle does to the atrium through the valve ring."""
+
+    ventricle_delay_s: float = _value(0.025, 0.0, 0.2, "s", "R peak to first pressure rise; from memory")
+    ventricle_peak_s: float = _value(0.29, 0.05, 1.0, "s", "time to peak elastance at an interval of 1 s, grows with its square root; from memory")
+    atrium_delay_s: float = _value(0.04, 0.0, 0.2, "s", "P onset to first atrial tension; from memory")
+    atrium_length_s: float = _value(0.18, 0.03, 0.5, "s", "length of atrial contraction; calibrated to P onset → a of 80 to 100 ms")
+    leaflet_c: float = _value(0.16, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
+    leaflet_lag_s: float = _value(0.015, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
+    annulus_share: float = _value(0.18, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
+    annulus_lag_s: float = _value(0.02, 0.002, 0.2, "s", "calibrated to x")
+
+
+@dataclass(frozen=True)
+class Circulation:
+    """The closed loop. Build others with `with_values`."""
+
+    blood_volume_ml: float = _value(5400.0, 300.0, 12000.0, "ml", f"{_HELDT} has 5700; calibrated to a mean right-atrial pressure of 3")
+    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.28, 0.68))
+    rv: Chamber = field(default_factory=lambda: Chamber.of(46.0, 0.05, 0.60))
+    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.20, 0.50))
+    lv: Chamber = field(default_factory=lambda: Chamber.of(30.0, 0.085, 1.9))
+    tricuspid: Valve = field(default_factory=lambda: Valve(8.0, 0.0, 40.0, 53.0, 1.5))
+    pulmonary: Valve = field(default_factory=lambda: Valve(5.0, 0.0, 27.0, 27.0, 1.5))
+    mitral: Valve = field(default_factory=lambda: Valve(6.0, 0.0, 27.0, 53.0, 1.5))
+    aortic: Valve = field(default_factory=lambda: Valve(5.0, 0.0, 16.0, 16.0, 1.5))
+    pericardium: Pericardium = field(default_factory=Pericardium)
+    heart: Heart = field(default_factory=Heart)
+    arteries: Vessel = field(default_factory=lambda: Vessel(0.03, 1.5, 715.0))
+    upper: Vessel = field(default_factory=lambda: Vessel(0.11, 7.0, 645.0))
+    kidneys: Vessel = field(default_factory=lambda: Vessel(0.11, 5.0, 30.0))
+    splanchnic: Vessel = field(default_factory=lambda: Vessel(0.07, 50.0, 1146.0))
+    legs: Vessel = field(default_factory=lambda: Vessel(0.10, 27.0, 716.0))
+    abdominal: Vessel = field(default_factory=lambda: Vessel(0.019, 1.3, 79.0))
+    ivc: Vessel = field(default_factory=lambda: Vessel(0.008, 0.5, 33.0))
+    svc: Vessel = field(default_factory=lambda: Vessel(0.028, 1.3, 16.0))
+    pulmonary_arteries: Vessel = field(default_factory=lambda: Vessel(0.07, 3.4, 160.0))
+    pulmonary_veins: Vessel = field(default_factory=lambda: Vessel(0.006, 9.0, 430.0))
+    pulmonary_inlet: float = _value(0.006, 0.0, 1.0, "mmHg·s/ml", _HELDT)
+    micro_upper: float = _value(4.4, 0.1, 100.0, "mmHg·s/ml", _HELDT)
+    micro_kidneys: float = _value(4.7, 0.1, 100.0, "mmHg·s/ml", _HELDT)
+    micro_splanchnic: float = _value(2.8, 0.1, 100.0, "mmHg·s/ml", _HELDT)
+    micro_legs: float = _value(4.0, 0.1, 100.0, "mmHg·s/ml", _HELDT)
+
+    def __post_init__(self) -> None:
+        _check(self, "")
+        for name in ("ra", "rv", "la", "lv"):
+            chamber = getattr(self, name)
+            if chamber.e_peak < chamber.e_rest:
+                raise InputError(f"{name}.e_peak = {chamber.e_peak:g} mmHg/ml: it must not be below {name}.e_rest = {chamber.e_rest:g}")
+
+    def with_values(self, values: Mapping[str, float]) -> Circulation:
+        """A copy with values by dotted name: ``{"tricuspid.a_min_cm2": 0.3, "blood_volume_ml": 5000}``.
+
+        Raises
+        ------
+        InputError
+            No such parameter, or a value outside its range; the message names both.
+        """
+        parts: dict[str, Any] = {}
+        nested: dict[str, dict[str, float]] = {}
+        for name, value in values.items():
+            head, dot, tail = name.partition(".")
+            known = {f.name: f for f in fields(self)}
+            if head not in known or bool(dot) != is_dataclass(getattr(self, head)):
+                raise InputError(f"no parameter {name!r}; parameters are: {', '.join(names(self))}")
+            if dot:
+                if tail not in {f.name for f in fields(getattr(self, head))}:
+                    raise InputError(f"no parameter {name!r}; {head} has: {', '.join(f.name for f in fields(getattr(self, head)))}")
+                nested.setdefault(head, {})[tail] = value
+            else:
+                parts[head] = value
+        for head, changes in nested.items():
+            parts[head] = replace(getattr(self, head), **changes)
+        return replace(self, **parts)
+
+
+def names(parameters: Circulation) -> list[str]:
+    """Dotted names of all parameters."""
+    found = []
+    for f in fields(parameters):
+        value = getattr(parameters, f.name)
+        found += [f"{f.name}.{g.name}" for g in fields(value)] if is_dataclass(value) else [f.name]
+    return found
+
+
+def _check(node: Any, prefix: str) -> None:
+    for f in fields(node):
+        value = getattr(node, f.name)
+        if is_dataclass(value):
+            _check(value, f"{prefix}{f.name}.")
+        else:
+            _check_value(f, f"{prefix}{f.name}", value)
+
+
+def _check_value(f: Field[Any], name: str, value: Any) -> None:
+    low, high, unit = f.metadata["low"], f.metadata["high"], f.metadata["unit"]
+    if not isinstance(value, int | float) or not math.isfinite(value) or not low <= value <= high:
+        raise InputError(f"{name} = {value!r}: allowed are {low:g} to {high:g} {unit}")
+
+
+PRESETS: dict[str, dict[str, float]] = {
+    "healthy": {},
+    "hypovolaemia": {"blood_volume_ml": 4700.0},
+    "right_ventricular_failure": {"rv.e_peak": 0.35, "rv.e_rest": 0.09, "blood_volume_ml": 5900.0, "pulmonary_arteries.r": 0.14},
+    "acute_tricuspid_regurgitation": {"tricuspid.a_min_cm2": 0.7, "ra.e_rest": 0.45, "ra.e_peak": 0.9, "blood_volume_ml": 5600.0},
+    "chronic_tricuspid_regurgitation": {"tricuspid.a_min_cm2": 0.7, "ra.e_rest": 0.05, "ra.e_peak": 0.10, "ra.v0_ml": 60.0,
+                                        "pericardium.v0_ml": 900.0, "blood_volume_ml": 6000.0},
+    "tricuspid_stenosis": {"tricuspid.a_max_cm2": 0.9, "ra.e_peak": 1.1, "blood_volume_ml": 5600.0},
+    "constriction": {"pericardium.k_mmhg": 4.0, "pericardium.v0_ml": 560.0, "pericardium.phi_ml": 22.0, "blood_volume_ml": 6000.0},
+    "tamponade": {"pericardium.fluid_ml": 280.0, "pericardium.k_mmhg": 1.2, "blood_volume_ml": 5700.0},
+    "restrictive": {"rv.e_rest": 0.10, "rv.stiffness": 0.012, "lv.e_rest": 0.15, "ra.e_peak": 1.0, "blood_volume_ml": 5800.0},
+    "child": {
+        "blood_volume_ml": 1490.0, "ra.v0_ml": 4.0, "rv.v0_ml": 12.0, "la.v0_ml": 6.0, "lv.v0_ml": 8.0, "ra.e_rest": 0.7, "ra.e_peak": 2.0,
+        "rv.e_rest": 0.17, "rv.e_peak": 3.2, "la.e_rest": 0.7, "la.e_peak": 1.7, "lv.e_rest": 0.3, "lv.e_peak": 8.0,
+    },
+}
+"""Changes from the healthy adult, by name."""
+
+
+def preset(name: str) -> Circulation:
+    """The circulation of that name; InputError lists the names."""
+    if name not in PRESETS:
+        raise InputError(f"no circulation {name!r}; there are: {', '.join(PRESETS)}")
+    return Circulation().with_values(PRESETS[name])
