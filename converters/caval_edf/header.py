@@ -7,13 +7,14 @@ from __future__ import annotations
 
 import math
 import os
+import unicodedata
 from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
 
 from caval.errors import FileError, InputError
 
-__all__ = ["MONTHS", "Header", "SignalHeader", "ascii_field", "number_field", "read_header"]
+__all__ = ["MONTHS", "Header", "SignalHeader", "ascii_field", "free_field", "number_field", "plain", "read_header"]
 
 _MAIN = (
     ("version", 8), ("patient", 80), ("recording", 80), ("startdate", 8), ("starttime", 8), ("header_bytes", 8), ("reserved", 44),
@@ -23,8 +24,8 @@ _SIGNAL = (
     ("label", 16), ("transducer", 80), ("unit", 8), ("physical_min", 8), ("physical_max", 8), ("digital_min", 8), ("digital_max", 8),
     ("prefilter", 80), ("n_samples", 8), ("reserved", 32),
 )
-_NO_DATE = "01.01.85"
-"""What stands for an unknown date beside ``Startdate X``."""
+_NO_DATE, _NO_TIME = "01.01.85", "00.00.00"
+"""What stands for an unknown date beside ``Startdate X``, and for an unknown time."""
 _MOST_SIGNALS = 4096
 MONTHS = ["JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC"]
 _PLAIN = str.maketrans({"µ": "u", "μ": "u", "₂": "2", "°": "d", "–": "-", "−": "-"})
@@ -48,7 +49,7 @@ class SignalHeader:
 
 @dataclass(frozen=True)
 class Header:
-    """The header of a file. `sample_bytes` is 2 for EDF, 3 for BDF; `n_records` is what the file holds, whole."""
+    """The header of a file. `sample_bytes` is 2 for EDF, 3 for BDF; `n_records` is what the file holds, whole; `left_bytes` come after."""
 
     text: dict[str, str]
     signals: tuple[SignalHeader, ...]
@@ -56,14 +57,11 @@ class Header:
     header_bytes: int
     n_records: int
     record_duration_s: float
+    left_bytes: int = 0
 
     @property
     def record_samples(self) -> int:
         return sum(s.n_samples for s in self.signals)
-
-    @property
-    def is_plus(self) -> bool:
-        return self.text["reserved"][:5] in ("EDF+C", "EDF+D", "BDF+C", "BDF+D")
 
     @property
     def has_gaps(self) -> bool:
@@ -72,12 +70,13 @@ class Header:
     @property
     def start_time(self) -> datetime | None:
         """Date and time of the header, whole seconds; None where they cannot be read as such."""
-        return None if self.is_undated else _start_time(self.text)
+        return _start_time(self.text)
 
     @property
     def is_undated(self) -> bool:
-        """The header says that the date is not known."""
-        return self.text["startdate"] == _NO_DATE and self.text["recording"].split()[:2] == ["Startdate", "X"]
+        """The header says that neither date nor time are known, the way our writer does."""
+        is_blank = self.text["startdate"] == _NO_DATE and self.text["starttime"] == _NO_TIME
+        return is_blank and self.text["recording"].split()[:2] == ["Startdate", "X"]
 
 
 def read_header(path: Path) -> Header:
@@ -108,18 +107,28 @@ def read_header(path: Path) -> Header:
     if duration_s < 0 or (duration_s == 0 and not all(s.is_annotation for s in signals)):
         raise FileError(f"{path.name}: a data record of {duration_s:g} s; it must be above 0")
     if declared == -1:
-        declared = whole  # a recorder that never closed its file
+        declared = whole  # a recorder that never closed its file: what is whole counts
     elif declared != whole or left:
         verb = "is truncated" if whole < declared else "does not fit its header"
-        held = f"{whole} data records" + (f" and {left} bytes" if left else "")
-        raise FileError(f"{path.name} {verb}: the header declares {declared} data records, the file holds {held}")
-    return Header(text, signals, sample_bytes, header_bytes, declared, duration_s)
+        expected = header_bytes + declared * record_bytes
+        raise FileError(
+            f"{path.name} {verb}: its {declared} data records make {expected} bytes, it has {size} ({max(whole, 0)} whole data records)"
+        )
+    return Header(text, signals, sample_bytes, header_bytes, declared, duration_s, left)
+
+
+def _decoded(raw: bytes) -> str:
+    """Header text is ASCII by the specification; strangers write UTF-8 or Latin-1."""
+    try:
+        return raw.decode("utf-8")
+    except UnicodeDecodeError:
+        return raw.decode("latin-1")
 
 
 def _split(raw: bytes, layout: tuple[tuple[str, int], ...]) -> dict[str, str]:
     fields, at = {}, 0
     for name, width in layout:
-        fields[name] = raw[at : at + width].decode("latin-1").rstrip(" \0")
+        fields[name] = _decoded(raw[at : at + width]).rstrip(" \0")
         at += width
     return fields
 
@@ -130,7 +139,7 @@ def _columns(raw: bytes, n_signals: int) -> list[dict[str, str]]:
     at = 0
     for name, width in _SIGNAL:
         for signal in fields:
-            signal[name] = raw[at : at + width].decode("latin-1").strip(" \0")
+            signal[name] = _decoded(raw[at : at + width]).strip(" \0")
             at += width
     return fields
 
@@ -168,16 +177,29 @@ def _integer(path: Path, what: str, text: str, low: int, high: int) -> int:
 def _start_time(text: dict[str, str]) -> datetime | None:
     date, time = text["startdate"].replace("-", ".").replace("/", "."), text["starttime"].replace(":", ".")
     try:
-        day, month, year = (int(part) for part in date.split("."))
         hour, minute, second = (int(part) for part in time.split("."))
-        year += 1900 if year >= 85 else 2000  # the clipping date of EDF
         words = text["recording"].split()
         if words[:1] == ["Startdate"] and len(words) > 1 and words[1] != "X":
             long_day, month_name, long_year = words[1].split("-")
             day, month, year = int(long_day), MONTHS.index(month_name.upper()) + 1, int(long_year)
+        else:
+            day, month, year = (int(part) for part in date.split("."))
+            year += 1900 if year >= 85 else 2000  # the clipping date of EDF
         return datetime(year, month, day, hour, minute, second)
     except ValueError:
         return None
+
+
+def plain(value: str) -> str:
+    """The spelling that stands for a label or unit in EDF: ``µV`` becomes ``uV``, ``cmH₂O`` becomes ``cmH2O``."""
+    return value.translate(_PLAIN)
+
+
+def free_field(value: str, width: int) -> bytes:
+    """A text field without bearing on the signals (patient, transducer): letters without their accents, cut to fit, padded."""
+    bare = "".join(c for c in unicodedata.normalize("NFKD", plain(value)) if not unicodedata.combining(c))
+    shown = "".join(c if c.isprintable() else " " for c in bare)
+    return shown.encode("ascii", "replace")[:width].ljust(width)
 
 
 def ascii_field(value: str, width: int, what: str) -> bytes:
@@ -188,16 +210,17 @@ def ascii_field(value: str, width: int, what: str) -> bytes:
     InputError
         Too long, or characters that EDF does not hold.
     """
-    plain = value.translate(_PLAIN)
-    if len(plain) > width or not plain.isascii() or not plain.isprintable():
+    text = plain(value)
+    if len(text) > width or not text.isascii() or not text.isprintable():
         raise InputError(f"{what} {value!r}: EDF holds {width} printable ASCII characters there; rename it first")
-    return plain.encode("ascii").ljust(width)
+    return text.encode("ascii").ljust(width)
 
 
 def number_field(value: float, what: str) -> bytes:
     """The shortest text of at most 8 characters that comes nearest to a number, padded."""
-    texts = [repr(value), *(f"{value:.{digits}g}" for digits in range(1, 9)), *(f"{value:.{digits}f}" for digits in range(7))]
-    fitting = [t for t in (text.removesuffix(".0") for text in texts) if len(t) <= 8]
+    texts = [repr(value), *(f"{value:.{digits}{kind}}" for kind in "gfe" for digits in range(9))]
+    short = (text.removesuffix(".0").replace("e-0", "e-").replace("e+0", "e").replace("e+", "e") for text in texts)
+    fitting = [text for text in short if len(text) <= 8]
     if not fitting:
         raise InputError(f"{what} {value!r} does not fit the 8 characters that EDF has for it")
-    return min(fitting, key=lambda t: (abs(float(t) - value), len(t))).encode("ascii").ljust(8)
+    return min(fitting, key=lambda t: (abs(float(t) - value), "e" in t, len(t))).encode("ascii").ljust(8)

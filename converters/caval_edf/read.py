@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import replace
 from datetime import datetime, timedelta
 from pathlib import Path
@@ -14,7 +14,7 @@ from caval.errors import FileError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_edf.header import Header, SignalHeader, read_header
-from caval_edf.tal import FILL, GAP, decode, hole_text
+from caval_edf.tal import FILL, GAP, decode, hole_texts
 
 __all__ = ["read_annotations", "read_edf"]
 
@@ -44,14 +44,24 @@ def read_edf(path: Path) -> Recording:
         if not signal.is_annotation:
             channels.append(_channel(header, signal, records, position, onsets))
         position += signal.n_samples
-    start = header.start_time
+    start = None if header.is_undated and not first_s else header.start_time
     start_time: datetime | None = None if start is None else start + timedelta(seconds=first_s)
-    notes = ()
-    if start is None and not header.is_undated:
-        notes = (f"start {header.text['startdate']} {header.text['starttime']} is no date and time; left out",)
+    notes = tuple(_notes(header, starts, first_s))
     main = {f"edf.{k}": header.text[k] for k in ("patient", "recording", "reserved", "record_duration", "startdate")}
     recording = Recording(path.stem, tuple(channels), start_time, {"annotations": track}, main, "edf", path, notes, (path,))
     return _with_noted_gaps(recording)
+
+
+def _notes(header: Header, starts: NDArray[np.float64], first_s: float) -> Iterator[str]:
+    """What is odd about the file, one line each."""
+    if header.start_time is None:
+        yield f"start {header.text['startdate']!r} {header.text['starttime']!r} is no date and time; left out"
+    if header.left_bytes:
+        yield f"the file was not closed by its recorder; {header.left_bytes} bytes of a data record cut short are left out"
+    if not header.has_gaps and len(starts):
+        off_s = np.abs(starts - first_s - np.arange(len(starts)) * header.record_duration_s)
+        if np.nanmax(off_s, initial=0.0) > max(header.record_duration_s / 2, 1e-3):
+            yield f"said to be continuous, but data record {int(np.nanargmax(off_s))} claims another time; read as continuous"
 
 
 def read_annotations(path: Path) -> Track:
@@ -76,7 +86,7 @@ def _annotations(header: Header, records: NDArray[np.uint8], name: str) -> tuple
     position = 0
     for signal in header.signals:
         width = signal.n_samples * header.sample_bytes
-        if signal.is_annotation and header.is_plus:
+        if signal.is_annotation and width:
             column = np.ascontiguousarray(records[:, position : position + width])
             kept, at, lasts, words = decode([row.tobytes() for row in column], name)
             starts = kept if not len(starts) else starts
@@ -90,7 +100,7 @@ def _annotations(header: Header, records: NDArray[np.uint8], name: str) -> tuple
 
 def _record_onsets(header: Header, starts: NDArray[np.float64], first_s: float, name: str) -> NDArray[np.float64] | None:
     """Time of each data record after the first; None when they follow one another."""
-    if not header.has_gaps:
+    if not header.has_gaps or not header.n_records:
         return None
     onsets = starts - first_s
     if len(onsets) != header.n_records or not np.isfinite(onsets).all() or (np.diff(onsets) < header.record_duration_s - 1e-6).any():
@@ -160,8 +170,9 @@ def _with_noted_gaps(recording: Recording) -> Recording:
     text = track.text
     noted = np.zeros(len(track), dtype=bool)
     channels = []
-    for channel in recording.channels:
-        is_gap, is_fill = (text == hole_text(channel.label, kind) for kind in (GAP, FILL))
+    names = (hole_texts(recording.labels, kind) for kind in (GAP, FILL))
+    for channel, gap_name, fill_name in zip(recording.channels, *names, strict=True):
+        is_gap, is_fill = text == gap_name, text == fill_name
         if is_gap.any() or is_fill.any():
             noted |= is_gap | is_fill
             start, stop, fill = (

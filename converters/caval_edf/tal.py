@@ -6,22 +6,36 @@ record (EDF+ specification, 2.2.2 to 2.2.4).
 
 from __future__ import annotations
 
+import math
+from collections import Counter
 from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
 
 from caval.errors import FileError, InputError
+from caval_edf.header import plain
 
-__all__ = ["FILL", "GAP", "decode", "encode", "hole_text", "seconds_text", "spread"]
-
+__all__ = ["FILL", "GAP", "decode", "encode", "hole_texts", "seconds_text", "spread"]
 
 GAP, FILL = "gap", "fill"
 
 
-def hole_text(label: str, kind: str) -> str:
-    """Text that notes samples of a channel without a value: a gap, or the fill of the last data record."""
-    return f"BAD_{label.upper()}/{kind}"
+def hole_texts(labels: Sequence[str], kind: str) -> list[str]:
+    """Texts that note samples of each channel without a value, a gap or the fill of the last data record.
+
+    Channels of one label are told apart by number.
+
+    >>> hole_texts(["CVP", "P", "P"], GAP)
+    ['BAD_CVP/gap', 'BAD_P/gap', 'BAD_P#2/gap']
+    """
+    seen: Counter[str] = Counter()
+    texts = []
+    for label in labels:
+        name = plain(label).upper()
+        seen[name] += 1
+        texts.append(f"BAD_{name}{f'#{seen[name]}' if seen[name] > 1 else ''}/{kind}")
+    return texts
 
 
 def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], list[float], list[float], list[str]]:
@@ -49,14 +63,21 @@ def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], li
                 at, lasts = float(onset), float(duration or 0)
             except ValueError:
                 raise FileError(f"{name}: data record {number} holds an annotation at {onset[:20]!r}, which is no time") from None
-            if not any(words) and np.isnan(starts[number]):
+            if np.isnan(starts[number]) and not any(words[:1]):
                 starts[number] = at
+                words = words[1:]
             for word in words:
-                if word:
-                    onsets.append(at)
-                    durations.append(lasts)
-                    texts.append(word.decode("utf-8", errors="replace"))
+                onsets.append(at)
+                durations.append(lasts)
+                texts.append(_decoded(word))
     return starts, onsets, durations, texts
+
+
+def _decoded(word: bytes) -> str:
+    try:
+        return word.decode("utf-8")
+    except UnicodeDecodeError:
+        return word.decode("latin-1")
 
 
 def seconds_text(seconds: float) -> str:
@@ -66,7 +87,9 @@ def seconds_text(seconds: float) -> str:
 
 
 def encode(onset_s: float, duration_s: float, text: str) -> bytes:
-    """One annotation."""
+    """One annotation; InputError for a time that is no number or a text that holds the format's own separators."""
+    if not (math.isfinite(onset_s) and math.isfinite(duration_s)):
+        raise InputError(f"annotation {text!r} at {onset_s} s, lasting {duration_s} s: EDF+ needs finite times")
     if any(mark in text for mark in "\x00\x14\x15"):
         raise InputError(f"annotation {text!r} holds a control character that EDF+ uses itself (0, 20 or 21)")
     sign = "" if onset_s < 0 and seconds_text(onset_s) != "0" else "+"

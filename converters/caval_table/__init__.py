@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 from caval.registry import Format
-from caval_table.bids import write_physioevents
+from caval_table.bids import read_physioevents, write_physioevents
 from caval_table.csv_track import read_csv_track, write_csv_track
 
-__all__ = ["BIDS", "CSV", "read_csv_track", "write_csv_track", "write_physioevents"]
+__all__ = ["BIDS", "CSV", "read_csv_track", "read_physioevents", "write_csv_track", "write_physioevents"]
 
 CSV = Format(
     name="csv",
@@ -15,4 +15,10 @@ CSV = Format(
     read_track=read_csv_track,
     write_marked=write_csv_track,
 )
-BIDS = Format(name="bids", description="annotations as BIDS physioevents (.tsv.gz with .json)", write_marked=write_physioevents)
+BIDS = Format(
+    name="bids",
+    description="annotations as BIDS physioevents (.tsv.gz with .json)",
+    suffixes=(".gz",),
+    read_track=read_physioevents,
+    write_marked=write_physioevents,
+)

@@ -6,17 +6,15 @@ from pathlib import Path
 
 from caval.registry import Format
 from caval_wfdb.annotation import read_annotations
-from caval_wfdb.read import header_path, read_wfdb
+from caval_wfdb.read import header_path, is_annotation_ending, read_wfdb
 from caval_wfdb.write import write_marked, write_wfdb
 
 __all__ = ["FORMAT", "read_annotations", "read_wfdb", "write_marked", "write_wfdb"]
 
 
 def _owns(path: Path) -> bool:
-    """A record name without ending, or any file whose ending no other format claims and that looks like annotations."""
-    if header_path(path).is_file():
-        return True
-    return path.is_file() and path.suffix != "" and path.read_bytes()[-2:] == b"\0\0"
+    """A record name without ending, or a file whose ending could be that of an annotation file."""
+    return header_path(path).is_file() or (path.is_file() and is_annotation_ending(path.suffix[1:]))
 
 
 FORMAT = Format(

@@ -27,6 +27,8 @@ _ORDER = '_NLRaVFJASEj/Q~_|_sT*D"=pB^t+u?![]en@xf()r'
 SYMBOLS = {code: symbol for code, symbol in enumerate(_ORDER) if symbol != "_"}
 """Symbol of each annotation code that has one."""
 _CODES = {symbol: code for code, symbol in SYMBOLS.items() if symbol} | {f"code{c}": c for c in range(1, 50) if not SYMBOLS.get(c)}
+BEAT_SYMBOLS = frozenset("NLRBAaJSVrFejnE/fQ?")
+"""Symbols of the codes that stand for a beat."""
 _SKIP, _NUM, _SUB, _CHN, _AUX = 59, 60, 61, 62, 63
 _RESOLUTION = re.compile(r"## time resolution: ([0-9.]+(?:[eE][+-]?[0-9]+)?)")
 _MOST_TEXT = 255
@@ -69,7 +71,7 @@ def decode(raw: bytes, name: str) -> tuple[dict[str, NDArray], float | None]:
             length = (value + 1) // 2
             if at + length > n or not ticks:
                 raise FileError(f"{name} is truncated within a text, after {len(ticks)} annotations")
-            texts[-1] = raw[2 * at : 2 * at + value].decode("latin-1").rstrip("\0")
+            texts[-1] = _decoded(raw[2 * at : 2 * at + value])
             at += length
         elif code in (_NUM, _SUB, _CHN):
             if not ticks:
@@ -98,6 +100,14 @@ def decode(raw: bytes, name: str) -> tuple[dict[str, NDArray], float | None]:
     return _without_definitions(columns)
 
 
+def _decoded(raw: bytes) -> str:
+    """Texts are bytes of no stated encoding: what reads as UTF-8 is that, all else Latin-1."""
+    try:
+        return raw.rstrip(b"\0").decode("utf-8")
+    except UnicodeDecodeError:
+        return raw.rstrip(b"\0").decode("latin-1")
+
+
 def _without_definitions(columns: dict[str, NDArray]) -> tuple[dict[str, NDArray], float | None]:
     """Less the notes that speak of the file itself, and the empty annotations that only move time."""
     rate = None
@@ -118,18 +128,21 @@ def encode(columns: dict[str, NDArray], ticks_per_s: float) -> bytes:
     Raises
     ------
     InputError
-        Ticks out of order or below 0, a text above 255 bytes or outside Latin-1, a chan, num or subtype out of range.
+        Ticks out of order, a text above 255 bytes, a chan, num or subtype out of range.
     """
     tick, code = columns["tick"].astype(np.int64), columns["code"].astype(np.int64)
-    if len(tick) and (tick[0] < 0 or (np.diff(tick) < 0).any()):
-        raise InputError("WFDB annotations need sample numbers in order and not below 0")
+    if (np.diff(tick) < 0).any():
+        raise InputError("WFDB annotations need sample numbers in order")
     out = bytearray(_head(ticks_per_s))
     before = chan_before = num_before = 0
     fields = [columns[name].tolist() for name in ("subtype", "chan", "num", "text")]
     for t, c, sub, chan, num, text in zip(tick.tolist(), code.tolist(), *fields, strict=True):
         step = t - before
         before = t
-        if step > 0x3FF:
+        if not 0 <= step <= 0x3FF:
+            if not -(2**31) <= step < 2**31:
+                raise InputError(f"WFDB annotations lie at most {2**31 - 1} ticks apart; the one at tick {t} lies farther")
+            step &= 0xFFFFFFFF
             out += _word(_SKIP, 0) + (step >> 16).to_bytes(2, "little") + (step & 0xFFFF).to_bytes(2, "little")
             step = 0
         out += _word(c, step)
@@ -157,10 +170,10 @@ def _byte(value: int, low: int, high: int, what: str) -> int:
 
 
 def _text(text: str) -> bytes:
-    try:
-        raw = text.encode("latin-1")
-    except UnicodeEncodeError:
-        raise InputError(f"annotation {text!r} holds characters outside Latin-1, which WFDB has no place for") from None
+    """A text as Latin-1, which other readers expect; as UTF-8 where that cannot hold it, or would be read back as something else."""
+    raw = text.encode("latin-1", "replace")
+    if _decoded(raw) != text:
+        raw = text.encode("utf-8")
     if len(raw) > _MOST_TEXT:
         raise InputError(f"annotation {text[:30]!r}… has {len(raw)} bytes; WFDB holds {_MOST_TEXT}")
     return _word(_AUX, len(raw)) + raw + b"\0" * (len(raw) % 2)
@@ -211,17 +224,18 @@ def _rate_of_header(path: Path) -> float:
 
 
 def _joined(track: Track) -> Track:
-    """Begin and end notes as spans; one without its partner stays as it is."""
+    """Begin and end notes as spans, the first begun the first ended; one without its partner stays as it is."""
     text = track.text
-    open_at: dict[tuple[str, int], int] = {}
+    open_at: dict[tuple[str, int], list[int]] = {}
     duration = track.duration_s.copy()
     words, keep = text.copy(), np.ones(len(track), dtype=bool)
     for i, word in enumerate(text):
         if word.endswith(BEGIN):
-            open_at[word.removesuffix(BEGIN), int(track.channel[i])] = i
+            open_at.setdefault((word.removesuffix(BEGIN), int(track.channel[i])), []).append(i)
         elif word.endswith(END):
-            begin = open_at.pop((word.removesuffix(END), int(track.channel[i])), None)
-            if begin is not None:
+            begun = open_at.get((word.removesuffix(END), int(track.channel[i])))
+            if begun:
+                begin = begun.pop(0)
                 duration[begin] = track.onset_s[i] - track.onset_s[begin]
                 words[begin], keep[i] = word.removesuffix(END), False
     if keep.all():
@@ -233,8 +247,11 @@ def _joined(track: Track) -> Track:
 def track_bytes(track: Track, ticks_per_s: float, *, default_channel: int = 0) -> bytes:
     """A Track as an annotation file: beats and other codes by their symbol, all else as notes, spans as two of them.
 
-    A note at tick 0 is written at tick 1: wfdb's reader takes notes at 0 for words about the file and drops them.
+    A beat's letter that stands alone as a text is a beat. A note at tick 0 is written at tick 1: wfdb's reader takes notes at 0 for
+    words about the file and drops them.
     """
+    if not (np.isfinite(track.onset_s).all() and np.isfinite(track.duration_s).all()):
+        raise InputError("an annotation has no finite time; WFDB needs a sample number for each")
     symbols = track.extra.get("symbol")
     text = track.text
     tick: list[int] = []
@@ -242,17 +259,18 @@ def track_bytes(track: Track, ticks_per_s: float, *, default_channel: int = 0) -
     words: list[str] = []
     rows: list[int] = []
     for i in range(len(track)):
-        at = max(0, round(track.onset_s[i] * ticks_per_s))
+        word, at = str(text[i]), round(track.onset_s[i] * ticks_per_s)
         symbol = str(symbols[i]) if symbols is not None else ""
-        known = _CODES.get(symbol, NOTE_CODE)
+        if not symbol and (word in BEAT_SYMBOLS or word.startswith("+ (")):
+            symbol = word[0]
+        known = _CODES.get(symbol, NOTE_CODE) if track.duration_s[i] == 0 else NOTE_CODE
+        parts: Sequence[tuple[int, str]] = [(at, word)]
         if known != NOTE_CODE:
-            parts: Sequence[tuple[int, str]] = [(at, str(text[i])[len(symbol) :].lstrip())]
+            parts = [(at, word.removeprefix(symbol).lstrip())]
         elif track.duration_s[i] > 0:
-            parts = [(at, text[i] + BEGIN), (round((track.onset_s[i] + track.duration_s[i]) * ticks_per_s), text[i] + END)]
-        else:
-            parts = [(at, str(text[i]))]
+            parts = [(at, word + BEGIN), (round((track.onset_s[i] + track.duration_s[i]) * ticks_per_s), word + END)]
         for place, word in parts:
-            tick.append(max(place, 1) if known == NOTE_CODE else place)
+            tick.append(1 if place == 0 and known == NOTE_CODE else place)
             code.append(known)
             words.append(word)
             rows.append(i)

@@ -10,15 +10,20 @@ from caval.registry import detector
 
 __all__ = ["xqrs"]
 
+_SLOWEST_HZ = 50.0
+"""The detector filters up to 20 Hz and needs some room above twice that."""
 _SHORTEST_S = 10.0
 """The detector learns from its first seconds; below this it has no default to fall back on that finds anything."""
 
 
 @detector(name="xqrs", role="ecg")
 def xqrs(ecg: Signal) -> NDArray[np.float64]:
-    """QRS times in seconds by wfdb's XQRS; none on a lead that is flat, missing, or shorter than 10 s. About a minute for each hour."""
+    """QRS times in seconds by wfdb's XQRS; none on a lead that is flat, missing, slower than 50 Hz or shorter than 10 s.
+
+    About a minute for each hour.
+    """
     known = np.isfinite(ecg.values)
-    if len(ecg) < _SHORTEST_S * ecg.sampling_rate or known.sum() < 0.5 * len(ecg):
+    if ecg.sampling_rate < _SLOWEST_HZ or len(ecg) < _SHORTEST_S * ecg.sampling_rate or known.sum() < 0.5 * len(ecg):
         return np.empty(0)
     values = np.interp(np.arange(len(ecg)), np.flatnonzero(known), ecg.values[known])
     if np.ptp(values) < 1e-9 * max(1.0, float(np.abs(values).max())):

@@ -9,8 +9,10 @@ from pathlib import Path
 
 from caval.errors import FileError
 
-__all__ = ["Header", "Segment", "SignalLine", "read_header", "safe_name"]
+__all__ = ["NO_UNIT", "Header", "Segment", "SignalLine", "read_header", "safe_name"]
 
+NO_UNIT = "(none)"
+"""What our own comments call an empty unit."""
 _DEFAULT_RATE_HZ = 250.0
 _DEFAULT_GAIN = 200.0
 _MOST_SIGNALS = 4096
@@ -152,6 +154,8 @@ def _signal(path: Path, line: str) -> SignalLine:
         gain = float(t.get("gain", 0.0))
     except ValueError:
         raise FileError(f"{path.name}: gain {t['gain']!r} is no number") from None
+    if int(t.get("spf", 1)) < 1:
+        raise FileError(f"{path.name}: {line[:60]!r} has no sample in a frame")
     zero = int(t.get("adczero", 0))
     unit = t.get("unit", "mV" if gain else "").replace("mm Hg", "mmHg")
     return SignalLine(

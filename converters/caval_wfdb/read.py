@@ -13,9 +13,9 @@ from caval.errors import FileError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_wfdb.annotation import read_annotations
-from caval_wfdb.header import Header, SignalLine, read_header
+from caval_wfdb.header import NO_UNIT, Header, SignalLine, read_header
 
-__all__ = ["header_path", "read_wfdb"]
+__all__ = ["header_path", "is_annotation_ending", "read_wfdb"]
 
 _RANGE = {
     "80": 8, "508": 8, "310": 10, "311": 10, "212": 12, "8": 16, "16": 16, "61": 16, "160": 16, "516": 16, "24": 24, "524": 24, "32": 32,
@@ -23,9 +23,9 @@ _RANGE = {
 """Bits of each signal format that wfdb reads."""
 _BYTES = {"16": 2.0, "61": 2.0, "160": 2.0, "212": 1.5, "310": 4 / 3, "311": 4 / 3, "24": 3.0, "32": 4.0, "80": 1.0, "8": 1.0}
 """Bytes a sample, where a format has as many for each."""
+_PLAIN = {"16": ("<i2", 0), "61": (">i2", 0), "160": ("<u2", 32768), "80": ("u1", 128), "32": ("<i4", 0)}
+"""Formats of whole bytes as NumPy has them, and the stored number that stands for 0."""
 _NO_ANNOTATION = frozenset(("hea", "dat", "edf", "bdf", "csv", "tsv", "json", "png", "pdf", "txt", "md", "html", "gz", "zip", "parquet"))
-_DEEPEST = 1
-"""Segments are records of their own; a segment of segments is refused."""
 
 
 def header_path(path: Path) -> Path:
@@ -47,15 +47,19 @@ def read_wfdb(path: Path) -> Recording:
     """
     hea = header_path(Path(path))
     header = read_header(hea)
+    files = {hea, *(hea.parent / line.file for line in header.signals)}
     if header.segments:
-        channels, notes = _segmented(hea, header, depth=0)
+        channels, notes = _segmented(hea, header, files)
     else:
         channels, notes = _channels(hea, header)
     tracks, more = _tracks(hea, header.frame_rate)
     comments = "\n".join(c for c in header.comments if not c.startswith("caval "))
     main = {"wfdb.record_line": header.text["record_line"], "wfdb.comments": comments}
-    files = (hea, *sorted({hea.parent / line.file for line in header.signals}))
-    recording = Recording(hea.stem, tuple(channels), header.start_time, tracks, main, "wfdb", hea, (*notes, *more), files)
+    if header.start_time is None and len(header.text["record_line"].split()) > 4:
+        more.append(f"start time {' '.join(header.text['record_line'].split()[4:])!r} is no time with a date; left out")
+    recording = Recording(
+        hea.stem, tuple(channels), header.start_time, tracks, main, "wfdb", hea, (*notes, *more), (hea, *sorted(files - {hea}))
+    )
     return _with_kept(recording, header.comments)
 
 
@@ -78,7 +82,7 @@ def _channels(hea: Path, header: Header) -> tuple[list[Channel], list[str]]:
         n_frames = _frames(hea, header, mine)
         place = next(i for i, other in enumerate(mine) if other is line)
         number = next(i for i, other in enumerate(header.signals) if other is line)
-        source = _memory_mapped(hea, mine, place, n_frames) if line.fmt == "16" else _through_wfdb(hea, line, number)
+        source = _memory_mapped(hea, mine, place, n_frames) if line.fmt in _PLAIN else _through_wfdb(hea, line, number)
         label = line.label or f"signal {number}"
         text = {f"wfdb.{k}": v for k, v in line.text.items() if k in ("fmt", "gain", "baseline", "adcres", "adczero", "unit")}
         if not line.has_gain:
@@ -122,17 +126,19 @@ def _frames(hea: Path, header: Header, lines: tuple[SignalLine, ...]) -> int:
 
 
 def _memory_mapped(hea: Path, lines: tuple[SignalLine, ...], place: int, n_frames: int) -> Callable[[int, int], NDArray]:
-    """Source of a signal of a format-16 file."""
+    """Source of a signal of a file in which every sample is a number of whole bytes."""
     widths = [line.samples_per_frame for line in lines]
     first, width, frame = sum(widths[:place]), widths[place], sum(widths)
     path, offset = hea.parent / lines[0].file, lines[0].offset
+    dtype, zero = _PLAIN[lines[0].fmt]
 
     def source(start: int, stop: int) -> NDArray:
         if stop <= start:
-            return np.empty(0, dtype=np.int16)
-        frames = np.memmap(path, dtype="<i2", mode="r", offset=offset, shape=(n_frames, frame))
+            return np.empty(0, dtype=np.int32)
+        frames = np.memmap(path, dtype=dtype, mode="r", offset=offset, shape=(n_frames, frame))
         low, high = start // width, (stop - 1) // width + 1
-        return np.ascontiguousarray(frames[low:high, first : first + width]).reshape(-1)[start - low * width : stop - low * width]
+        stored = np.ascontiguousarray(frames[low:high, first : first + width]).reshape(-1)[start - low * width : stop - low * width]
+        return stored.astype(np.int32) - zero if zero else stored
 
     return source
 
@@ -159,8 +165,11 @@ def _through_wfdb(hea: Path, line: SignalLine, number: int) -> Callable[[int, in
     return source
 
 
-def _segmented(hea: Path, header: Header, depth: int) -> tuple[list[Channel], list[str]]:
-    """Channels of a multi-segment record: by label where the first segment is a layout of no length, else by position."""
+def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channel], list[str]]:
+    """Channels of a multi-segment record: by label where the first segment is a layout of no length, else by position.
+
+    The files of the segments are put into `files`.
+    """
     parts: list[tuple[int, int, list[Channel] | None]] = []
     at, notes = 0, []
     layout: list[Channel] | None = None
@@ -169,14 +178,18 @@ def _segmented(hea: Path, header: Header, depth: int) -> tuple[list[Channel], li
             parts.append((at, segment.n_frames, None))
         else:
             own = read_header(hea.with_name(segment.name + ".hea"))
-            if own.segments or depth >= _DEEPEST:
+            if own.segments:
                 raise FileError(f"{hea.name}: segment {segment.name!r} is itself made of segments, which is not allowed")
             if own.frame_rate != header.frame_rate:
                 raise FileError(f"{hea.name}: segment {segment.name!r} has {own.frame_rate:g} Hz, the record {header.frame_rate:g} Hz")
+            files |= {hea.with_name(segment.name + ".hea")}
             if segment.n_frames == 0 and layout is None and not parts:
                 layout = [_layout_channel(line, own) for line in own.signals]
                 continue
-            channels, said = _channels(hea, replace(own, n_frames=segment.n_frames if own.n_frames is None else own.n_frames))
+            if own.n_frames is not None and own.n_frames < segment.n_frames:
+                raise FileError(f"{hea.name}: segment {segment.name!r} has {own.n_frames} samples, not the {segment.n_frames} declared")
+            files |= {hea.parent / line.file for line in own.signals}
+            channels, said = _channels(hea.with_name(segment.name + ".hea"), replace(own, n_frames=own.n_frames or segment.n_frames))
             notes += said
             parts.append((at, segment.n_frames, channels))
         at += segment.n_frames
@@ -228,13 +241,18 @@ def _tracks(hea: Path, frame_rate: float) -> tuple[dict[str, Track], list[str]]:
     notes = []
     for path in sorted(hea.parent.glob(f"{_escaped(hea.stem)}.*")):
         ending = path.name[len(hea.stem) + 1 :]
-        if not ending.isalnum() or ending.lower() in _NO_ANNOTATION or not path.is_file():
+        if not is_annotation_ending(ending) or not path.is_file():
             continue
         try:
             tracks[ending] = read_annotations(path, default_rate=frame_rate)
         except FileError as error:
             notes.append(f"annotations left out: {error}")
     return tracks, notes
+
+
+def is_annotation_ending(ending: str) -> bool:
+    """Whether a file ending could be the name of an annotator: letters and digits, and not that of another kind of file."""
+    return ending.isalnum() and ending.lower() not in _NO_ANNOTATION
 
 
 def _escaped(name: str) -> str:
@@ -266,9 +284,13 @@ def _restored(channel: Channel, kept: dict[str, str]) -> Channel:
             missing = None if "rail" in kept or "whole" in kept else calibration.missing
             calibration = Calibration(int(low), int(high), float(physical_low), float(physical_high), missing)
         n_samples = min(int(kept.get("n_samples", channel.n_samples)), channel.n_samples)
+        ranges = [[int(end) for end in text.split("-")] for text in kept.get("gaps", "").split()]
+        gaps = np.array(ranges, dtype=np.int64).reshape(-1, 2) if ranges else channel.gaps
     except ValueError:
         return channel  # an edited comment is no reason to fail
+    unit = kept.get("unit", channel.unit)
     return replace(
-        channel, header=header, calibration=calibration, n_samples=n_samples, label=kept.get("label", channel.label),
+        channel, header=header, calibration=calibration, n_samples=n_samples, gaps=gaps, label=kept.get("label", channel.label),
+        unit="" if unit == NO_UNIT else unit,
         transducer=kept.get("transducer", ""), prefilter=kept.get("prefilter", ""),
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import re
 from fractions import Fraction
 from math import gcd, lcm
 from pathlib import Path
@@ -14,10 +15,12 @@ from caval.errors import FileError, InputError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_wfdb.annotation import TRACK_ENDING, track_bytes
+from caval_wfdb.header import NO_UNIT
 
 __all__ = ["ticks_per_second", "write_marked", "write_wfdb"]
 
 _BLOCK_FRAMES = 1 << 16
+_SPELLINGS = str.maketrans({"µ": "u", "μ": "u", "₂": "2", "°": "deg"})
 _BITS = {"212": 12, "16": 16, "24": 24, "32": 32}
 
 
@@ -31,14 +34,16 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
     Raises
     ------
     InputError
-        Rates without a common frame, or integers of more than 32 bits.
+        Rates without a common frame, integers of more than 32 bits, a name or an annotation that WFDB cannot hold.
     FileError
         The files cannot be written.
     """
     path = Path(path)
     if not recording.channels:
         raise InputError(f"{recording.name!r} has no channel to write")
-    name = path.stem
+    name = path.name.removesuffix(path.suffix)
+    if not re.fullmatch(r"[-\w]+", name, re.ASCII):
+        raise InputError(f"record name {name!r}: WFDB allows letters, digits, '_' and '-' in it; give the output another name")
     frame_rate, widths = _frame(recording)
     n_frames = max(-(-c.n_samples // w) for c, w in zip(recording.channels, widths, strict=True))
     fmt = _format(recording)
@@ -57,11 +62,10 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
             lines.append(_signal_line(channel, calibration, f"{name}.dat", fmt, width, frame_rate, firsts[i], sums[i]))
             comments += [f"caval {i} {key} {value}" for key, value in _kept(channel, calibration, width * n_frames, low, rails[i]).items()]
         header.write_text("\n".join([*lines, *(f"# {c}" for c in comments)]) + "\n", encoding="utf-8")
-        for ending, track in recording.tracks.items():
-            if len(track):
-                target = path.with_suffix(f".{'atr' if ending == 'annotations' else ending}")
-                target.write_bytes(track_bytes(track, ticks_per_second(recording)))
-                written.append(target)
+        for ending, track in _by_ending(recording).items():
+            target = path.with_suffix(f".{ending}")
+            target.write_bytes(track_bytes(track, ticks_per_second(recording)))
+            written.append(target)
     except OSError as error:
         if isinstance(error, FileError):
             raise
@@ -79,6 +83,17 @@ def write_marked(recording: Recording, track: Track, directory: Path, stem: str)
         target.write_bytes(track_bytes(track, ticks_per_second(recording)))
         written.append(target)
     return tuple(written)
+
+
+def _by_ending(recording: Recording) -> dict[str, Track]:
+    """Tracks by file ending: ``annotations`` of EDF+ goes to ``atr``, and characters that no ending has are left out of it."""
+    found: dict[str, Track] = {}
+    for name, track in recording.tracks.items():
+        ending = "atr" if name == "annotations" else "".join(c for c in name if c.isalnum() and c.isascii())
+        if len(track):
+            ending = ending if ending not in ("", "hea", "dat") else f"{ending}ann"
+            found[ending] = found.get(ending, Track.empty()).join(track)
+    return found
 
 
 def ticks_per_second(recording: Recording) -> float:
@@ -179,15 +194,25 @@ def _signal_line(
 ) -> str:
     gain, baseline = _gain(channel, calibration)
     skew = round(-channel.start_s * float(frame_rate))
+    if skew < 0 or abs(skew + channel.start_s * float(frame_rate)) > 1e-3:
+        raise InputError(
+            f"channel {channel.label!r} begins at {channel.start_s:.6g} s; WFDB holds a channel that begins whole frames of "
+            f"{1 / float(frame_rate):.6g} s before 0, no other"
+        )
     checksum = (total + 32768) % 65536 - 32768
-    unit = (channel.unit or "mV").replace("µ", "u").replace("₂", "2").replace(" ", "")
     bits = {"212": 12, "16": 16, "24": 24, "32": 32}[fmt]
     place = f"{file} {fmt}" + (f"x{width}" if width > 1 else "") + (f":{skew}" if skew > 0 else "")
-    return f"{place} {gain}({baseline})/{unit} {bits} 0 {first} {checksum} 0 {_plain(channel.label)}"
+    return f"{place} {gain}({baseline})/{_unit(channel.unit)} {bits} 0 {first} {checksum} 0 {_plain(channel.label)}"
+
+
+def _unit(unit: str) -> str:
+    """A unit as other readers take it: ASCII, in one word, ``NU`` for none (where nothing stands they read mV)."""
+    text = unit.translate(_SPELLINGS).encode("ascii", "ignore").decode("ascii")
+    return "".join(c for c in text if c.isalnum() or c in "^-?%/_") or "NU"
 
 
 def _plain(label: str) -> str:
-    return " ".join(label.replace("µ", "u").replace("₂", "2").encode("ascii", "replace").decode("ascii").split()) or "signal"
+    return " ".join(label.translate(_SPELLINGS).encode("ascii", "replace").decode("ascii").split()) or "signal"
 
 
 def _gain(channel: Channel, calibration: Calibration) -> tuple[str, int]:
@@ -213,6 +238,10 @@ def _kept(channel: Channel, calibration: Calibration, held: int, missing: int, r
         kept["whole"] = "no sample is missing"
     if rails:
         kept["rail"] = f"{rails} samples of {missing} are values, not missing"
+        if len(channel.holes()):
+            kept["gaps"] = " ".join(f"{start}-{stop}" for start, stop in channel.holes().tolist())
+    if _unit(channel.unit) != channel.unit:
+        kept["unit"] = channel.unit or NO_UNIT
     if held != channel.n_samples:
         kept["n_samples"] = str(channel.n_samples)
     if _plain(channel.label) != channel.label:

@@ -63,9 +63,15 @@ SPANS: dict[str, SpanTerm] = {
         SpanTerm("disconnected", True, "no body pressure on the line: zero, or a level no vein has, without a pulse"),
         SpanTerm("implausible", True, "values that no venous pressure takes, or a change no vein makes"),
         SpanTerm("noise", True, "movement, handling or interference larger than the pulse"),
+        SpanTerm("flush", True, "the line is flushed from the pressure bag, and rings after it"),
+        SpanTerm("zeroing", True, "the transducer is open to air to set its zero"),
+        SpanTerm("sampling", True, "blood is drawn, or the line is closed for it"),
+        SpanTerm("damped", True, "the line passes the mean but not the waves"),
+        SpanTerm("level_change", False, "the transducer or the patient was moved up or down"),
+        SpanTerm("drift", False, "the zero wanders"),
     )
 }
-"""Kinds of span that the first form of the quality stage gives."""
+"""Kinds of span: the first six are what the quality stage tells apart today, the others what recordings with known truth hold."""
 
 
 def mark_text(wave: str) -> str:

@@ -269,16 +269,16 @@ def _others(p: Circulation) -> Floats:
 
 
 def _start(p: Circulation) -> Floats:
-    """Volumes to begin with: chambers half full, what is left over the vessels in proportion to their compliance.
+    """Volumes to begin with: chambers at diastolic pressures, what is left over the vessels in proportion to their compliance.
 
     Raises
     ------
     InputError
         Less blood than the vessels hold unstressed.
     """
-    chambers = np.array([60.0, 110.0, 60.0, 110.0]) * min(1.0, p.blood_volume_ml / 5600.0)
+    chambers = np.array([c.v0_ml + pressure / c.e_rest for c, pressure in ((p.ra, 4.0), (p.rv, 4.0), (p.la, 8.0), (p.lv, 8.0))])
     vessels = _vessels(p)
-    arterial = 85.0 * p.arteries.c
+    arterial = 80.0 * p.arteries.c
     spare = p.blood_volume_ml - chambers.sum() - vessels[:, 2].sum() - arterial
     lowest = vessels[:, 2].sum() + chambers.sum() + arterial
     if spare <= 0:
