@@ -28,7 +28,7 @@ def write_physioevents(recording: Recording, track: Track, directory: Path, stem
     labels = np.array([*recording.labels, "n/a"], dtype=object)
     rows = pd.DataFrame({"onset": track.onset_s, "duration": track.duration_s, "trial_type": track.text, "channel": labels[track.channel]})
     table = directory / f"{stem}_physioevents{_ENDING}"
-    with gzip.GzipFile(table, "wb", mtime=0) as stream:  # without a time inside, equal content is an equal file
+    with open(table, "wb") as file, gzip.GzipFile("", "wb", fileobj=file, mtime=0) as stream:  # equal content is an equal file
         stream.write(rows.to_csv(sep="\t", header=False, index=False, na_rep="n/a").encode("utf-8"))
     described = directory / f"{stem}_physioevents.json"
     waves = {vocabulary.mark_text(w): term.meaning for w, term in vocabulary.WAVES.items()}
@@ -57,11 +57,12 @@ def read_physioevents(path: Path) -> Track:
     described = path.with_name(path.name.removesuffix(_ENDING) + ".json")
     try:
         columns = list(json.loads(described.read_text(encoding="utf-8"))["Columns"])
-        rows = pd.read_csv(path, sep="\t", names=columns, na_values="n/a", keep_default_na=False, dtype={"trial_type": object})
+        times = {"onset": ["n/a"], "duration": ["n/a"]}
+        rows = pd.read_csv(path, sep="\t", names=columns, na_values=times, keep_default_na=False)
         onset = rows["onset"].to_numpy(float)
         lasts = rows["duration"].to_numpy(float) if "duration" in rows else np.zeros(len(rows))
     except (OSError, EOFError, ValueError, KeyError, TypeError) as error:
         raise FileError(f"{path.name} and {described.name} are no BIDS events with an onset in seconds ({error})") from error
     text = next((rows[c] for c in ("trial_type", "message", "text") if c in rows), pd.Series("", index=rows.index, dtype=object))
     known = np.isfinite(onset)
-    return Track.build(onset[known], text[known].fillna("").to_numpy(object), duration_s=np.nan_to_num(lasts[known]))
+    return Track.build(onset[known], text[known].astype(str).replace("n/a", "").to_numpy(object), duration_s=np.nan_to_num(lasts[known]))

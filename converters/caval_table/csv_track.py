@@ -37,19 +37,20 @@ def read_csv_track(path: Path) -> Track:
         No such file, no table, no column of times, or a time that is no number.
     """
     try:
-        rows = pd.read_csv(path)
+        blanks = {column: ["", "nan", "NaN", "NA", "n/a"] for column in (*_TIMES, "duration_s")}
+        rows = pd.read_csv(path, keep_default_na=False, na_values=blanks)
     except (OSError, ValueError) as error:
         raise FileError(f"{path}: no table that can be read ({error})") from error
     time = next((c for c in _TIMES if c in rows), None)
     if time is None:
         raise FileError(f"{path} has no column of times; one of {', '.join(_TIMES)} is needed, it has: {', '.join(map(str, rows.columns))}")
-    if not pd.api.types.is_numeric_dtype(rows[time]):
-        raise FileError(f"{path}: column {time} holds something that is no number of seconds")
-    rows = rows[np.isfinite(rows[time].to_numpy(float))]
+    try:
+        onset = rows[time].to_numpy(float)
+        lasts = np.nan_to_num(rows["duration_s"].to_numpy(float)) if "duration_s" in rows else np.zeros(len(rows))
+    except ValueError:
+        raise FileError(f"{path}: column {time} or duration_s holds something that is no number of seconds") from None
+    known = np.isfinite(onset)
     text = next((c for c in _TEXTS if c in rows), None) if time != "r_time_s" else None
-    if text:
-        words = rows[text].fillna("").astype(str).to_numpy(object)
-    else:
-        words = np.full(len(rows), "R" if time == "r_time_s" else "", dtype=object)
-    lasts = rows["duration_s"].fillna(0.0).to_numpy(float) if "duration_s" in rows else 0.0
-    return Track.build(rows[time].to_numpy(float), words, duration_s=lasts)
+    blank = np.full(len(rows), "R" if time == "r_time_s" else "", dtype=object)
+    words = rows[text].astype(str).to_numpy(object) if text else blank
+    return Track.build(onset[known], words[known], duration_s=lasts[known])

@@ -13,8 +13,18 @@ __all__ = ["FORMAT", "read_annotations", "read_wfdb", "write_marked", "write_wfd
 
 
 def _owns(path: Path) -> bool:
-    """A record name without ending, or a file whose ending could be that of an annotation file."""
-    return header_path(path).is_file() or (path.is_file() and is_annotation_ending(path.suffix[1:]))
+    """A record name without ending, a signal or annotation file beside its header, or a file that ends as annotation files do."""
+    if path.suffix == ".dat" or is_annotation_ending(path.suffix[1:]) or not path.is_file():
+        return header_path(path).is_file() or _ends_like_annotations(path)
+    return False
+
+
+def _ends_like_annotations(path: Path) -> bool:
+    if not path.is_file() or path.stat().st_size < 2:
+        return False
+    with open(path, "rb") as stream:
+        stream.seek(-2, 2)
+        return stream.read() == b"\0\0"
 
 
 FORMAT = Format(

@@ -30,7 +30,10 @@ _NO_ANNOTATION = frozenset(("hea", "dat", "edf", "bdf", "csv", "tsv", "json", "p
 
 def header_path(path: Path) -> Path:
     """The header of a record given by its header, its name, or one of its files."""
-    return path if path.suffix == ".hea" else path.with_name(path.name + ".hea")
+    if path.suffix == ".hea":
+        return path
+    by_name = path.with_name(path.name + ".hea")
+    return path.with_suffix(".hea") if path.is_file() and not by_name.is_file() else by_name
 
 
 def read_wfdb(path: Path) -> Recording:

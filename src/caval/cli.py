@@ -220,33 +220,83 @@ def convert(
             typer.echo(str(path))
 
 
-@app.command(epilog=_epilog("caval demo", "caval demo --out elsewhere --minutes 5"))
-def demo(
-    out: Annotated[Path, typer.Option("--out", "-o", metavar="DIR", help="Folder for the record and what is found in it.")] = Path("demo"),
-    minutes: Annotated[float, typer.Option(min=0.2, max=60.0, help="Length of the invented record.")] = 2.0,
+@app.command(
+    epilog=_epilog(
+        "caval simulate healthy healthy.edf",
+        "caval simulate fibrillation af.hea --minutes 10 --seed 7",
+        "caval simulate healthy fast.edf --set rhythm.heart_rate=120 --set line.damping=0.6 --set ra.e_rest=0.4",
+        "caval simulate mine.toml mine.edf",
+    )
+)
+def simulate(
+    scenario: Annotated[str, typer.Argument(metavar="SCENARIO", help="A name, or a .toml file. A name that is none lists them.")],
+    out: Annotated[Path, typer.Argument(metavar="OUT", help="The record to write: .edf, .bdf or .hea.")],
+    minutes: Annotated[float | None, typer.Option(metavar="M", help="Length; the scenario's own by default.", show_default=False)] = None,
+    seed: Annotated[int, typer.Option(metavar="N", min=0, help="The same seed gives the same record.")] = 1,
+    set_: Annotated[
+        list[str] | None, typer.Option("--set", metavar="KEY=VALUE", help="Change a value of the scenario.", show_default=False)
+    ] = None,
+    force: Force = False,
     quiet: Quiet = False,
     debug: Debug = False,
 ) -> None:
-    """Invent a record, write it as EDF, mark it as `caval mark` would, and say what to look at."""
+    """Simulate a patient whose every wave, volume and compliance is known; write the record, and the truth beside it.
+
+    The record carries the truth as annotations (truth/a, truth/R, truth/flush …); OUT_truth_marks.csv, OUT_truth_beats.csv and
+    OUT_truth_spans.csv hold it as tables. The patient is a closed-loop model, no person.
+    """
+    settings = {name: _number(value) for name, value in _pairs(set_, "--set").items()}
+    from caval.model.simulate import simulate as run
+
+    with _progress(quiet) as progress:
+        if progress is not None:
+            progress("simulate", 0.0)
+        made = run(scenario, minutes=minutes, seed=seed, settings=settings)
+    written = made.write(out, force=force)
+    if not quiet:
+        typer.echo(f"{made.scenario.title or made.scenario.name}: {made.scenario.shows}")
+        typer.echo("\n".join(str(path) for path in written))
+
+
+@app.command(epilog=_epilog("caval demo", "caval demo --out elsewhere --minutes 3"))
+def demo(
+    out: Annotated[Path, typer.Option("--out", "-o", metavar="DIR", help="Folder for the record and what is found in it.")] = Path("demo"),
+    minutes: Annotated[float | None, typer.Option(min=0.2, max=60.0, help="Length of the record; 6 by default.", show_default=False)] = None,
+    quiet: Quiet = False,
+    debug: Debug = False,
+) -> None:
+    """Simulate a patient in theatre, write the record as EDF, mark it as `caval mark` would, and say what to look at."""
     from caval import api
+    from caval.model.simulate import simulate as run
 
     record = out / "demo.edf"
     if record.exists() and not (out / "demo_run.json").exists():
         from caval.errors import FileError
 
         raise FileError(f"{record} exists and is not of an earlier demo; choose another --out")
-    api.write(api.demo_recording(minutes=minutes), record, force=True)
     with _progress(quiet) as progress:
+        if progress is not None:
+            progress("simulate", 0.0)
+        run("theatre", minutes=minutes).write(record, force=True)
         result = api.mark(record, progress=progress)
         written = result.write(out, table="csv", force=True)
     _report(result, written, quiet=quiet)
     if not quiet:
         typer.echo(
             f"\nOpen {out / 'demo.png'}: ECG, venous and arterial pressure with every wave marked, the median beat, the trend.\n"
-            "The record is drawn, not a patient's. Worth a look: the flush and the clotted stretch of the venous line are named in\n"
-            f"{out / 'demo_spans.csv'} and carry no marks; the diathermy on the ECG costs no beat, because the arterial trace shows it.\n"
+            "The patient is a model, no person. Worth a look: the flush at 45 s and the zeroing at 90 s are named in\n"
+            f"{out / 'demo_spans.csv'} and carry no marks; the diathermy at 130 and 150 s costs no beat, because the arterial trace shows it;\n"
+            "the venous pressure rises with the fluid given from 170 s; from 300 s on the atrium fibrillates.\n"
+            f"What is true of it stands in {out / 'demo_truth_marks.csv'}.\n"
             f"Next: caval look {record}, then caval mark YOUR_RECORD --out DIR"
         )
+
+
+def _number(text: str) -> float | str:
+    try:
+        return float(text)
+    except ValueError:
+        return text
 
 
 @app.command(epilog=_epilog("caval stages"))

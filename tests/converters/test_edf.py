@@ -129,8 +129,31 @@ def test_2_1_numbers_in_eight_characters() -> None:
         assert len(text) == 8
         assert float(text) == pytest.approx(value, rel=4e-3)  # three digits beside a sign, six zeros or an exponent
     assert number_field(-32.768, "limit") == b"-32.768 "
-    with pytest.raises(InputError, match="8 characters"):
-        number_field(-1.5e-300, "limit")
+
+
+def test_2_1_limits_that_eight_characters_cannot_hold(tmp_path: Path) -> None:
+    """A rounded limit shifts every value: limits are exact, or next to exact, or refused."""
+    import pyedflib
+
+    codes = np.array([-30000, 0, 12345, 30000], dtype=np.int16).repeat(50)
+    lines = {
+        "third": Calibration(-32768, 32767, -32768 / 3, 32767 / 3),  # no decimal is exact
+        "mitdb": Calibration(-32768, 32767, -32768 / 409.6, 32767 / 409.6),  # −80 is, 79.9975586 is not, 79.84375 is
+        "volts": Calibration(-32768, 32767, -3.2768e-5, 3.2767e-5),  # needs an exponent
+    }
+    sent = Recording.from_arrays({k: (codes, 50.0, "V") for k in lines}, name="rec", calibrations=lines)
+    path = write(tmp_path, sent)
+    with pyedflib.EdfReader(str(path)) as reader:
+        for number, (a, b) in enumerate(zip(sent.channels, caval.read(path).channels, strict=True)):
+            np.testing.assert_array_equal(b.digital(), codes)
+            np.testing.assert_allclose(b.physical(), a.physical(), rtol=0, atol=0.01 * a.calibration.scale)
+            np.testing.assert_allclose(reader.readSignal(number), a.physical(), rtol=0, atol=0.01 * a.calibration.scale)
+    mitdb = caval.read(path).channel("mitdb")
+    assert (mitdb.calibration.digital_max, mitdb.header["edf.physical_max"]) == (32704, "79.84375")
+    far = Calibration(-32768, 32767, 1e6, 1e6 + 0.065535)
+    with pytest.raises(InputError, match="8 characters") as error:
+        caval.write(Recording.from_arrays({"P": (codes, 50.0, "Pa")}, name="rec", calibrations={"P": far}), tmp_path / "far.edf")
+    one_line(error)
 
 
 @pytest.mark.parametrize(("label", "unit"), [("a label of seventeen", "mmHg"), ("CVP", "millimetres"), ("血压", "mmHg")])

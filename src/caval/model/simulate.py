@@ -11,6 +11,8 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from caval import registry
+from caval._files import write_all
 from caval.model.circulation import Haemodynamics, run
 from caval.model.ecg import ecg
 from caval.model.line import Diathermy, Line, measure, spoil_ecg
@@ -88,13 +90,24 @@ class Simulation:
     recording: Recording
     truth: Truth
 
-    def write_tables(self, directory: Path, stem: str) -> list[Path]:
-        """Write STEM_truth_marks.csv, STEM_truth_beats.csv and STEM_truth_spans.csv."""
-        written = []
-        for name, rows in (("marks", self.truth.marks), ("beats", self.truth.beats), ("spans", self.truth.spans)):
-            written.append(directory / f"{stem}_truth_{name}.csv")
-            rows.to_csv(written[-1], index=False)
-        return written
+    def write(self, path: str | Path, *, force: bool = False) -> list[Path]:
+        """Write the record with the truth as annotations, and STEM_truth_marks.csv, STEM_truth_beats.csv, STEM_truth_spans.csv beside it.
+
+        Raises
+        ------
+        FileError
+            A file exists and `force` is not set, or no format writes that ending.
+        """
+        path = Path(path)
+        writer = registry.format_for(path, "write").write
+        assert writer is not None
+
+        def make(folder: Path) -> None:
+            writer(self.recording.with_track("truth", self.truth.track), folder / path.name)
+            for name, rows in (("marks", self.truth.marks), ("beats", self.truth.beats), ("spans", self.truth.spans)):
+                rows.to_csv(folder / f"{path.stem}_truth_{name}.csv", index=False)
+
+        return write_all(path.parent, make, force=force)
 
 
 def simulate(

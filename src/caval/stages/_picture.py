@@ -115,7 +115,7 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
     if a is not None:
         places["a"] = a
     if "v" in places:
-        limit = min(places["v"] + 0.36, interval + min(places.get("a", -0.1), -0.02) - 0.03)
+        limit = min(places["v"] + 0.36, interval + min(places.get("a", 0.0), -0.02) - 0.03)
         y = _best(troughs, time, -trace, span, (places["v"] + 0.05, limit), places["v"] + 0.17, 0.10, 3.0)
         if y is not None:
             places["y"] = y

@@ -74,6 +74,10 @@ def quality(
             climbing = _climbing(values, signal, climb_mmhg) & ~blank
             _add(found, signal, climbing, "implausible", "the level climbs or falls without a turn")
             _add(found, signal, _moved(values, blank, signal, movement), "noise", f"range above {movement:g} times the usual")
+            lost = _without_pulse(values, blank, signal) & ~blank
+            at_zero = np.abs(moving_mean(values, round(_SMOOTH_S * signal.sampling_rate))) < 1.0
+            _add(found, signal, lost & at_zero, "disconnected", "no pulse, and a level of zero")
+            _add(found, signal, lost & ~at_zero, "damped", "a level without a pulse")
     return pd.concat(found, ignore_index=True) if found else tables.empty("spans")
 
 
@@ -171,6 +175,17 @@ def _moved(values: Floats, blank: Mask, signal: Signal, movement: float) -> Mask
     span = thin.take(ndimage.maximum_filter1d(smooth, width) - ndimage.minimum_filter1d(smooth, width))
     usual = _local_median(span, ~thin.take(blank), thin.time_s(signal))
     return thin.spread((span > movement * usual) & (span > usual + 4.0))
+
+
+def _without_pulse(values: Floats, blank: Mask, signal: Signal) -> Mask:
+    """Where the venous trace ranges over two seconds by less than a fifth of what it does around: nothing beats on the line."""
+    thin = Thin.of(signal, 0.1)
+    smooth = lowpass(values, signal.sampling_rate, 8.0)
+    width = round(2.0 * signal.sampling_rate) | 1
+    span = thin.take(ndimage.maximum_filter1d(smooth, width) - ndimage.minimum_filter1d(smooth, width))
+    usual = _local_median(span, ~thin.take(blank), thin.time_s(signal))
+    lost = (span < 0.2 * usual) & (usual > 1.0) & np.isfinite(usual)
+    return _widen(thin.spread(lost), round(0.9 * signal.sampling_rate))
 
 
 def _local_median(level: Floats, good: Mask, time: Floats) -> Floats:
