@@ -74,11 +74,14 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
 
 
 def write_marked(recording: Recording, track: Track, directory: Path, stem: str) -> tuple[Path, ...]:
-    """Write `track` as STEM.cvp; for a recording that is no WFDB record also the record itself. An empty track gives no file."""
+    """Write `track` as STEM.cvp; for a recording that is no WFDB record also the record itself.
+
+    A track without a mark gives no annotation file, whatever spans it has: a reader that finds one finds marks in it.
+    """
     written: list[Path] = []
     if recording.format != "wfdb":
         written += write_wfdb(recording, directory / f"{stem}.hea")
-    if len(track):
+    if len(track.marks()):
         target = directory / f"{stem}.{TRACK_ENDING}"
         target.write_bytes(track_bytes(track, ticks_per_second(recording)))
         written.append(target)

@@ -10,5 +10,6 @@ from caval_neurokit.cvp_clean import cvp_clean
 from caval_neurokit.cvp_peaks import cvp_peaks
 from caval_neurokit.cvp_plot import cvp_plot
 from caval_neurokit.cvp_process import cvp_process
+from caval_neurokit.cvp_simulate import cvp_simulate
 
-__all__ = ["cvp_clean", "cvp_peaks", "cvp_plot", "cvp_process"]
+__all__ = ["cvp_clean", "cvp_peaks", "cvp_plot", "cvp_process", "cvp_simulate"]

@@ -480,7 +480,9 @@ def test_marked_record_from_elsewhere_brings_its_signals(tmp_path: Path) -> None
 
 def test_no_marks_no_file(tmp_path: Path) -> None:
     path = write(tmp_path, record())
-    assert write_marked(caval.read(path), Track.empty(), tmp_path, "rec") == ()
+    spans = Track.build([1.0], ["BAD_CVP/disconnected"], duration_s=[6.0])
+    for track_ in (Track.empty(), spans):
+        assert write_marked(caval.read(path), track_, tmp_path, "rec") == ()
     assert not (tmp_path / "rec.cvp").exists()
 
 

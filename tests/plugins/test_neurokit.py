@@ -336,3 +336,28 @@ def test_plot_draws_three_panels_of_a_crop_too(processed):
         assert [axes.get_title() for axes in figure.axes] == ["Signal and waves", "Pressure at each wave", "Single beats"]
         figure.canvas.draw()
         plt.close(figure)
+
+
+def test_cvp_simulate_gives_a_signal_and_its_truth() -> None:
+    from caval_neurokit import cvp_simulate
+
+    cvp = cvp_simulate(duration=20, sampling_rate=250, heart_rate=75, random_state=3)
+    signals, info = cvp_simulate(duration=20, sampling_rate=250, heart_rate=75, random_state=3, return_info=True)
+    assert isinstance(cvp, np.ndarray)
+    assert np.array_equal(cvp, signals["CVP"])
+    assert len(signals) == 5000
+    assert abs(len(info["CVP_R_Peaks"]) - 25) <= 1  # 20 s at 75/min
+    assert len(info["CVP_A_Peaks"]) == len(info["CVP_R_Peaks"])
+    found = cvp_process(signals["CVP"], ecg_signal=signals["ECG"], sampling_rate=250)[1]["CVP_A_Peaks"]
+    truth = info["CVP_A_Peaks"][~np.isnan(info["CVP_A_Peaks"])]
+    near = [np.nanmin(np.abs(found - t)) for t in truth[2:-2]]
+    assert np.median(near) / 250 < 0.015  # half an a wave's width is 50 ms
+
+
+def test_cvp_simulate_names_what_cannot_be() -> None:
+    from caval_neurokit import cvp_simulate
+
+    with pytest.raises(InputError, match="heart_rate"):
+        cvp_simulate(duration=5, heart_rate=0)
+    with pytest.raises(InputError, match="duration"):
+        cvp_simulate(duration=0)
