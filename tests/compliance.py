@@ -10,6 +10,7 @@ and names the format's resolutions and a second, unrelated reader. What is writt
 
 from __future__ import annotations
 
+import contextlib
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
@@ -270,6 +271,21 @@ class FormatCompliance:
         with pytest.raises(FileError) as error:
             caval.read(path)
         assert path.name in one_line(error)
+
+    def test_damaged_bytes_give_a_file_error_or_a_recording(self, path: Path) -> None:
+        self.trip(record(duration_s=2.0).with_track("annotations", track()), path)
+        rng, whole = np.random.default_rng(5), path.read_bytes()
+        words = [b"-1", b"nan", b"1e9", b"99999999", b"0", b"\xff", b"~", b"/2", b":", b" ", b"EDF+D", b"+", b"1.5"]
+        for _ in range(200):
+            raw = bytearray(whole)
+            for _ in range(2):
+                at = int(rng.integers(0, min(len(raw), 256 * 5)))
+                word = words[rng.integers(len(words))]
+                raw[at : at + len(word)] = word
+            path.write_bytes(bytes(raw[: len(whole)]))
+            with contextlib.suppress(FileError):
+                for channel in caval.read(path).channels:
+                    channel.physical(0, min(channel.n_samples, 100))
 
     def test_a_truncated_file_says_so(self, path: Path) -> None:
         self.trip(record(), path)

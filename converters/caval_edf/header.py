@@ -186,7 +186,7 @@ def _start_time(text: dict[str, str]) -> datetime | None:
             day, month, year = (int(part) for part in date.split("."))
             year += 1900 if year >= 85 else 2000  # the clipping date of EDF
         return datetime(year, month, day, hour, minute, second)
-    except ValueError:
+    except (ValueError, OverflowError):
         return None
 
 

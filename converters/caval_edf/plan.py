@@ -99,8 +99,8 @@ def calibration_for(channel: Channel, sample_bytes: int) -> Calibration | None:
     lowest, highest = _extremes(channel, own, with_missing=fits and sample_bytes == 2)
     if lowest < low or highest > high:
         return None
-    first, first_error = min((_limit(own, code) for code in _inward(low, lowest)), key=lambda limit: limit[1])
-    last, last_error = min((_limit(own, code) for code in _inward(high, highest)), key=lambda limit: limit[1])
+    first, first_error = _best_limit(own, low, lowest)
+    last, last_error = _best_limit(own, high, highest)
     if max(first_error, last_error) > _WORST_STEPS or first[0] >= last[0]:
         raise InputError(f"channel {channel.label!r}: EDF has 8 characters for a limit, too few for {own.scale!r} {channel.unit} a step")
     return Calibration(first[0], last[0], first[1], last[1])
@@ -114,10 +114,15 @@ def _limit(calibration: Calibration, code: int) -> tuple[tuple[int, float], floa
     return (code, text), off if off > 1e-6 else 0.0
 
 
-def _inward(limit: int, extreme: int) -> list[int]:
-    """Codes that may be the limit: a few thousand next to it, and the extreme of the samples."""
-    step = 1 if extreme >= limit else -1
-    return [*range(limit, extreme, step)[:_MOST_TRIED], extreme]
+def _best_limit(calibration: Calibration, limit: int, extreme: int) -> tuple[tuple[int, float], float]:
+    """The first limit inward whose text is exact, of a few thousand and the extreme of the samples; else the nearest to it."""
+    best = _limit(calibration, extreme)
+    for code in range(limit, extreme, 1 if extreme >= limit else -1)[:_MOST_TRIED]:
+        tried = _limit(calibration, code)
+        if tried[1] == 0.0:
+            return tried
+        best = min(best, tried, key=lambda found: found[1])
+    return best
 
 
 def _extremes(channel: Channel, calibration: Calibration, *, with_missing: bool) -> tuple[int, int]:

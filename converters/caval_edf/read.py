@@ -18,6 +18,9 @@ from caval_edf.tal import FILL, GAP, decode, hole_texts
 
 __all__ = ["read_annotations", "read_edf"]
 
+_LATEST_START_S = 366 * 86400.0
+"""Strangers put more than the fraction of a second before their first data record; a year is a broken file."""
+
 
 def read_edf(path: Path) -> Recording:
     """Open an EDF or BDF file.
@@ -38,6 +41,8 @@ def read_edf(path: Path) -> Recording:
     records = _records(path, header)
     starts, track = _annotations(header, records, path.name)
     first_s = float(starts[0]) if len(starts) and np.isfinite(starts[0]) else 0.0
+    if abs(first_s) > _LATEST_START_S:
+        raise FileError(f"{path.name}: its first data record is said to begin at {first_s:g} s; EDF+ allows the fraction of a second there")
     onsets = _record_onsets(header, starts, first_s, path.name)
     channels, position = [], 0
     for signal in header.signals:

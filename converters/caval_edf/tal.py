@@ -109,18 +109,18 @@ def spread(stamps: Sequence[bytes], tals: Sequence[bytes], homes: NDArray[np.int
     homes : int array
         The record in which each would best stand, ascending.
     """
-    sizes = np.array([len(t) for t in tals], dtype=np.int64)
+    sizes = [len(t) for t in tals]
+    home = homes.tolist()
     stamp = max(len(s) for s in stamps)
-    room = stamp + max(int(sizes.max(initial=0)), int(np.ceil(sizes.sum() / len(stamps) * 1.1)))
+    room = stamp + max(max(sizes, default=0), -(-sum(sizes) * 11 // (10 * len(stamps))))
     while True:
         laid, waiting = [], 0
         for number, start in enumerate(stamps):
-            parts, used = [start], len(start)
-            while waiting < len(tals) and (homes[waiting] <= number) and used + sizes[waiting] <= room:
-                parts.append(tals[waiting])
-                used += int(sizes[waiting])
+            first, used = waiting, len(start)
+            while waiting < len(tals) and home[waiting] <= number and used + sizes[waiting] <= room:
+                used += sizes[waiting]
                 waiting += 1
-            laid.append(b"".join(parts))
+            laid.append(start + b"".join(tals[first:waiting]))
         if waiting == len(tals):
             return laid, room
-        room += int(np.ceil(sizes[waiting:].sum() / len(stamps) * 1.1)) + 1
+        room += -(-sum(sizes[waiting:]) * 11 // (10 * len(stamps))) + 1

@@ -85,9 +85,10 @@ def _is_not_ours(track: Track) -> NDArray[np.bool_]:
 
 def _gap_track(plans: list[Plan], n_records: int, track: Track) -> Track:
     """What has no value: holes of the channels, less those that `track` notes already, and the fill of the last data record."""
-    noted = {(str(t), round(on, 3), round(lasts, 3)) for t, on, lasts in zip(track.text, track.onset_s, track.duration_s, strict=True)}
+    names = [hole_texts([p.channel.label for p in plans], kind) for kind in (GAP, FILL)]
+    known = track.take(np.array([text in names[0] for text in track.texts] + [False])[track.code])
+    noted = {(str(t), round(on, 3), round(lasts, 3)) for t, on, lasts in zip(known.text, known.onset_s, known.duration_s, strict=True)}
     rows: list[tuple[str, float, float]] = []
-    names = (hole_texts([p.channel.label for p in plans], kind) for kind in (GAP, FILL))
     for plan, gap_name, fill_name in zip(plans, *names, strict=True):
         n, filled, rate = plan.channel.n_samples, n_records * plan.per_record, plan.channel.sampling_rate
         spans = [(gap_name, start / rate, (stop - start) / rate) for start, stop in plan.holes.tolist()]

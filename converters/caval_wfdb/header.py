@@ -130,7 +130,7 @@ def _start_time(words: list[str]) -> datetime | None:
         hour, minute, second = ([0.0] * (3 - len(clock)) + clock)[:3]
         whole = int(second)
         return datetime(year, month, day, int(hour), int(minute), whole, round((second - whole) * 1e6))
-    except ValueError:
+    except (ValueError, OverflowError):
         return None
 
 
@@ -157,6 +157,9 @@ def _signal(path: Path, line: str) -> SignalLine:
     if int(t.get("spf", 1)) < 1:
         raise FileError(f"{path.name}: {line[:60]!r} has no sample in a frame")
     zero = int(t.get("adczero", 0))
+    baseline = int(t.get("baseline", zero))
+    if (gain and not 1e-12 < abs(gain) < 1e12) or abs(baseline) > 2**53:
+        raise FileError(f"{path.name}: gain {t.get('gain')!r} and baseline {baseline} give no calibration")
     unit = t.get("unit", "mV" if gain else "").replace("mm Hg", "mmHg")
     return SignalLine(
         file=t["file"] if t["file"] == "~" else safe_name(t["file"], path.name),
@@ -165,7 +168,7 @@ def _signal(path: Path, line: str) -> SignalLine:
         skew=int(t.get("skew", 0)),
         offset=int(t.get("offset", 0)),
         gain=gain or _DEFAULT_GAIN,
-        baseline=int(t.get("baseline", zero)),
+        baseline=baseline,
         unit=unit or "mV",
         label=t.get("label", "").strip(),
         has_gain=bool(gain),

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -14,17 +13,10 @@ from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_wfdb.annotation import read_annotations
 from caval_wfdb.header import NO_UNIT, Header, SignalLine, read_header
+from caval_wfdb.samples import BITS, calibration_of, frames_held, source_of
 
 __all__ = ["header_path", "is_annotation_ending", "read_wfdb"]
 
-_RANGE = {
-    "80": 8, "508": 8, "310": 10, "311": 10, "212": 12, "8": 16, "16": 16, "61": 16, "160": 16, "516": 16, "24": 24, "524": 24, "32": 32,
-}
-"""Bits of each signal format that wfdb reads."""
-_BYTES = {"16": 2.0, "61": 2.0, "160": 2.0, "212": 1.5, "310": 4 / 3, "311": 4 / 3, "24": 3.0, "32": 4.0, "80": 1.0, "8": 1.0}
-"""Bytes a sample, where a format has as many for each."""
-_PLAIN = {"16": ("<i2", 0), "61": (">i2", 0), "160": ("<u2", 32768), "80": ("u1", 128), "32": ("<i4", 0)}
-"""Formats of whole bytes as NumPy has them, and the stored number that stands for 0."""
 _NO_ANNOTATION = frozenset(("hea", "dat", "edf", "bdf", "csv", "tsv", "json", "png", "pdf", "txt", "md", "html", "gz", "zip", "parquet"))
 
 
@@ -66,15 +58,6 @@ def read_wfdb(path: Path) -> Recording:
     return _with_kept(recording, header.comments)
 
 
-@dataclass(frozen=True, eq=False)
-class _File:
-    """How the signals of one file are interleaved: a frame holds `samples_per_frame` samples of each in turn."""
-
-    path: Path
-    lines: tuple[SignalLine, ...]
-    n_frames: int
-
-
 def _channels(hea: Path, header: Header) -> tuple[list[Channel], list[str]]:
     channels, notes = [], []
     files: dict[str, list[SignalLine]] = {}
@@ -82,10 +65,10 @@ def _channels(hea: Path, header: Header) -> tuple[list[Channel], list[str]]:
         files.setdefault(line.file, []).append(line)
     for line in header.signals:
         mine = tuple(files[line.file])
-        n_frames = _frames(hea, header, mine)
+        n_frames = frames_held(hea, header, mine)
         place = next(i for i, other in enumerate(mine) if other is line)
         number = next(i for i, other in enumerate(header.signals) if other is line)
-        source = _memory_mapped(hea, mine, place, n_frames) if line.fmt in _PLAIN else _through_wfdb(hea, line, number)
+        source = source_of(hea, mine, place, number, n_frames)
         label = line.label or f"signal {number}"
         text = {f"wfdb.{k}": v for k, v in line.text.items() if k in ("fmt", "gain", "baseline", "adcres", "adczero", "unit")}
         if not line.has_gain:
@@ -93,79 +76,9 @@ def _channels(hea: Path, header: Header) -> tuple[list[Channel], list[str]]:
         spf = line.samples_per_frame
         start_s = -line.skew / header.frame_rate
         channels.append(
-            Channel(label, line.unit, header.frame_rate * spf, n_frames * spf, source, _calibration(line), start_s, header=text)
+            Channel(label, line.unit, header.frame_rate * spf, n_frames * spf, source, calibration_of(line), start_s, header=text)
         )
     return channels, notes
-
-
-def _calibration(line: SignalLine) -> Calibration:
-    bits = _RANGE.get(line.fmt)
-    if bits is None:
-        raise FileError(f"signal format {line.fmt} of {line.file!r} is not one that can be read; these can: {', '.join(_RANGE)}")
-    low, high = -(2 ** (bits - 1)), 2 ** (bits - 1) - 1
-    return Calibration(low, high, (low - line.baseline) / line.gain, (high - line.baseline) / line.gain, missing=low)
-
-
-def _frames(hea: Path, header: Header, lines: tuple[SignalLine, ...]) -> int:
-    """Frames in a file, the header's number checked against its size."""
-    path = hea.parent / lines[0].file
-    if not path.is_file():
-        raise FileError(f"{hea.name} names {path.name}, which is not beside it")
-    if len({(line.fmt, line.offset) for line in lines}) > 1:
-        raise FileError(f"{hea.name}: the signals of {path.name} differ in format or offset")
-    size = path.stat().st_size - lines[0].offset
-    per_sample = _BYTES.get(lines[0].fmt)
-    declared = header.n_frames
-    if per_sample is None:
-        if declared is None:
-            raise FileError(f"{hea.name} does not say how many samples {path.name} holds")
-        return declared
-    held = int(size / (per_sample * sum(line.samples_per_frame for line in lines)) + 1e-9)
-    if declared is None:
-        return held
-    if held < declared:
-        raise FileError(f"{path.name} is truncated: {hea.name} declares {declared} frames, it holds {held}")
-    return declared
-
-
-def _memory_mapped(hea: Path, lines: tuple[SignalLine, ...], place: int, n_frames: int) -> Callable[[int, int], NDArray]:
-    """Source of a signal of a file in which every sample is a number of whole bytes."""
-    widths = [line.samples_per_frame for line in lines]
-    first, width, frame = sum(widths[:place]), widths[place], sum(widths)
-    path, offset = hea.parent / lines[0].file, lines[0].offset
-    dtype, zero = _PLAIN[lines[0].fmt]
-
-    def source(start: int, stop: int) -> NDArray:
-        if stop <= start:
-            return np.empty(0, dtype=np.int32)
-        frames = np.memmap(path, dtype=dtype, mode="r", offset=offset, shape=(n_frames, frame))
-        low, high = start // width, (stop - 1) // width + 1
-        stored = np.ascontiguousarray(frames[low:high, first : first + width]).reshape(-1)[start - low * width : stop - low * width]
-        return stored.astype(np.int32) - zero if zero else stored
-
-    return source
-
-
-def _through_wfdb(hea: Path, line: SignalLine, number: int) -> Callable[[int, int], NDArray]:
-    """Source of a signal in any other format, by the wfdb package."""
-    width = line.samples_per_frame
-
-    def source(start: int, stop: int) -> NDArray:
-        import wfdb
-
-        if stop <= start:
-            return np.empty(0, dtype=np.int32)
-        low, high = start // width, (stop - 1) // width + 1
-        try:
-            record = wfdb.rdrecord(
-                str(hea.with_suffix("")), sampfrom=low, sampto=high, channels=[number], physical=False, smooth_frames=False,
-                ignore_skew=True,
-            )
-        except (ValueError, IndexError, OSError) as error:
-            raise FileError(f"{hea.name}: signal {number} cannot be read ({error})") from error
-        return np.asarray(record.e_d_signal[0])[start - low * width : stop - low * width]
-
-    return source
 
 
 def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channel], list[str]]:
@@ -204,7 +117,7 @@ def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channe
 
 def _layout_channel(line: SignalLine, header: Header) -> Channel:
     rate = header.frame_rate * line.samples_per_frame
-    calibration = _calibration(line if line.fmt in _RANGE else replace(line, fmt="16"))
+    calibration = calibration_of(line if line.fmt in BITS else replace(line, fmt="16"))
     return Channel(line.label, line.unit, rate, 0, lambda start, stop: np.zeros(stop - start, dtype=np.int16), calibration)
 
 

@@ -18,7 +18,8 @@ from caval.model.sketch import sketch
 from caval.recording import Calibration, Recording, Signal
 from caval.track import Track
 from caval_wfdb import write_marked
-from caval_wfdb.annotation import decode, encode, track_bytes
+from caval_wfdb.annotation import track_bytes
+from caval_wfdb.codec import decode, encode
 from caval_wfdb.detectors import xqrs
 from compliance import STEPS, FormatCompliance, one_line, record, same_annotations, track
 

@@ -96,21 +96,15 @@ def _median(values: Floats, axis: int | None = None) -> Floats:
 def _places(time: Floats, trace: Floats, interval: float, span: float, noise: float) -> dict[str, float]:
     """Where the waves of a median beat are: the choice of extrema, in the order of waves, that fits height and common timing best.
 
-    Timing (from R, through the line; common practice and facts of section 1 of the wave table): a −0.06 s, c 0.11 s, x 0.235 s,
-    v 0.33 s + 0.16 of the interval, y 0.17 s after v.
+    Timing (from R, through the line; common practice): a −0.06 s, c 0.11 s, x 0.235 s, v 0.47 s times the square root of the interval
+    (the length of systole), y 0.17 s after v.
     """
     peaks = _prominent(trace, 1.0, max(0.015 * span, 2.0 * noise))
     troughs = _prominent(trace, -1.0, max(0.015 * span, 2.0 * noise))
-    places: dict[str, float] = {}
-    v_usual = 0.33 + 0.16 * min(interval, 1.4)
-
-    best = -np.inf
-    for x in troughs[(time[troughs] > 0.10) & (time[troughs] < 0.40)]:
-        for v in peaks[(time[peaks] > time[x] + 0.08) & (np.abs(time[peaks] - v_usual) < 0.17) & (time[peaks] < interval - 0.17)]:
-            score = 1.5 * (trace[v] - 2 * trace[x]) / span - _off(time[x], 0.235, 0.07) - _off(time[v], v_usual, 0.08)
-            if score > best:
-                best, places["x"], places["v"] = score, time[x], time[v]
-    tall = _prominent(trace, 1.0, max(0.06 * span, 4.0 * noise))  # an atrium that does not contract must not get an a from noise
+    places = _systole(peaks, troughs, time, trace, interval, span)
+    if "v" in places:
+        peaks = peaks[np.abs(time[peaks] - (places["v"] - interval)) > 0.05]  # the v of the beat before is no a
+    tall = np.intersect1d(peaks, _prominent(trace, 1.0, max(0.03 * span, 4.0 * noise)))  # an atrium that rests must not get an a from noise
     a = _best(tall, time, trace, span, (-0.28, min(0.06, places.get("x", 0.2) - 0.10)), -0.06, 0.08, 2.0)
     if a is not None:
         places["a"] = a
@@ -130,6 +124,25 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
         h = _best(peaks, time, trace, span, (places["y"] + 0.10, interval + places.get("a", -0.1) - 0.14), places["y"] + 0.2, 0.12, 1.0)
         if h is not None:
             places["h"] = h
+    return places
+
+
+def _systole(
+    peaks: NDArray[np.int64], troughs: NDArray[np.int64], time: Floats, trace: Floats, interval: float, span: float
+) -> dict[str, float]:
+    """The pair of x and v that fits best; without a pair, the one tall systolic wave, which is v (regurgitation leaves no x)."""
+    v_usual = 0.47 * np.sqrt(min(interval, 1.6))
+    late = peaks[(np.abs(time[peaks] - v_usual) < 0.17) & (time[peaks] < interval - 0.08)]
+    best, places = -np.inf, {}
+    for x in troughs[(time[troughs] > 0.10) & (time[troughs] < 0.40)]:
+        for v in late[time[late] > time[x] + 0.08]:
+            score = 1.5 * (trace[v] - 2 * trace[x]) / span - _off(time[x], 0.235, 0.07) - _off(time[v], v_usual, 0.08)
+            if score > best:
+                best, places = score, {"x": float(time[x]), "v": float(time[v])}
+    if not places and len(late):
+        tallest = late[np.argmax(trace[late])]
+        if trace[tallest] > trace.min() + 0.7 * span:
+            places = {"v": float(time[tallest])}
     return places
 
 

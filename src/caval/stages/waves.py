@@ -18,8 +18,9 @@ from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
 from caval.stages._picture import Picture, running_pictures
-from caval.stages._signal import fill, lowpass, refine
+from caval.stages._signal import cut, fill, lowpass, refine
 from caval.stages._usable import usable_beats
+from caval.vocabulary import WAVES
 
 __all__ = ["waves"]
 
@@ -30,12 +31,17 @@ _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.0
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
 _PROMINENCE_WINDOW_S = 0.5
+_SHARPEN_S = 0.024
+_QUIET_MMHG = 0.15
+"""Noise of the samples (from their third differences, in which no wave is left) up to which a beat is read off the finer trace."""
 _WEAK_MMHG = 0.12
 """An extremum lower than this, or than twice the noise, is weak."""
 
 
 @stage(name="waves", gives=("marks",), margin_s=150.0)
-def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: float = 12.0, delay_s: float = 0.03) -> pd.DataFrame:
+def waves(
+    cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: float = 12.0, fine_hz: float = 20.0, delay_s: float = 0.03
+) -> pd.DataFrame:
     """Mark the waves of every usable beat.
 
     Parameters
@@ -45,7 +51,10 @@ def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: f
     beats, spans : DataFrame
         As the anchors and quality stages give them.
     smooth_hz : float
-        The trace is read after a zero-phase low-pass at this frequency.
+        Waves are found after a zero-phase low-pass at this frequency.
+    fine_hz : float
+        Where the beat's noise allows it, the place of an extremum is that on the trace low-passed at this higher frequency: a wave with
+        one steep side, such as v, has its top nearer to that side than the smoother trace shows.
     delay_s : float
         Line and monitor delay with which z is read when there is no foot between a and c: the pressure at R plus this.
 
@@ -53,7 +62,7 @@ def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: f
     -------
     DataFrame
         ``time_s, mark, beat, pressure_mmhg, confidence, state``, in time order. Times are those of the channel as recorded; pressures
-        are those of the smoothed trace.
+        are those of the low-passed trace.
     """
     if not len(beats) or len(cvp) < 2 * cvp.sampling_rate:
         return tables.empty("marks")
@@ -65,6 +74,7 @@ def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: f
     pictures = running_pictures(smooth, beats, usable)
     if not pictures:
         return tables.empty("marks")
+    fine = Signal(lowpass(values, cvp.sampling_rate, fine_hz), cvp.sampling_rate, cvp.start_s, cvp.label, cvp.unit)
     trace = _Trace.of(smooth)
     found = _Found(beats, usable, pictures)
     found.seek("v", trace.peaks, found.r + 0.20, found.next_r - 0.08)
@@ -75,7 +85,8 @@ def waves(cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: f
     found.seek("h", trace.peaks, found.time["y"] + 0.08, found.next_r - 0.25)
     found.corner_c(smooth)
     found.foot_z(trace, smooth, delay_s)
-    return found.table(smooth)
+    found.sharpen(fine, values)
+    return found.table(smooth, fine)
 
 
 @dataclass(frozen=True, eq=False)
@@ -120,6 +131,7 @@ class _Found:
         self.usable = usable & (away.min(axis=1) <= _FARTHEST_S)
         self.noise = np.array([p.noise_mmhg for p in pictures])[self.which]
         self.span = np.array([p.span_mmhg for p in pictures])[self.which]
+        self.fine = np.zeros(len(self.r), dtype=bool)
         self.time: dict[str, Floats] = {}
         self.confidence: dict[str, Floats] = {}
         self.state: dict[str, NDArray[np.object_]] = {}
@@ -196,18 +208,35 @@ class _Found:
         self.state["z"] = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
         self.confidence["z"] = np.where(has, np.fmin(self.confidence["a"], self.confidence["c"]), 0.5)
 
-    def table(self, smooth: Signal) -> pd.DataFrame:
-        """The marks table."""
+    def sharpen(self, fine: Signal, raw: Floats) -> None:
+        """Move the extrema of quiet beats to the nearest of the finer trace, 24 ms at most."""
+        window = cut(raw, np.rint(fine.position(self.r - 0.3)).astype(int), round(fine.sampling_rate))
+        noise = 1.4826 * np.median(np.abs(np.diff(window, 3, axis=1)), axis=1) / 20.0**0.5
+        self.fine = noise < _QUIET_MMHG
+        of_fine = _Trace.of(fine)
+        for wave, time in self.time.items():
+            rows = np.flatnonzero(np.isfinite(time) & self.fine & (self.state[wave] != "fused"))
+            extrema = of_fine.peaks if WAVES[wave].is_peak else of_fine.troughs
+            if not len(rows) or len(extrema.time) < 2:
+                continue
+            right = np.clip(np.searchsorted(extrema.time, time[rows]), 1, len(extrema.time) - 1)
+            near = np.where(time[rows] - extrema.time[right - 1] < extrema.time[right] - time[rows], right - 1, right)
+            close = np.abs(extrema.time[near] - time[rows]) <= _SHARPEN_S
+            time[rows[close]] = extrema.time[near[close]]
+
+    def table(self, smooth: Signal, fine: Signal) -> pd.DataFrame:
+        """The marks table; pressures are those of the trace on which a mark was placed."""
         parts = []
         for wave, time in self.time.items():
             rows = np.flatnonzero(np.isfinite(time))
+            on_fine = self.fine[rows] & (self.state[wave][rows] != "fused")
             parts.append(
                 pd.DataFrame(
                     {
                         "time_s": time[rows],
                         "mark": wave,
                         "beat": self.beat[rows],
-                        "pressure_mmhg": smooth.at(time[rows]),
+                        "pressure_mmhg": np.where(on_fine, fine.at(time[rows]), smooth.at(time[rows])),
                         "confidence": self.confidence[wave][rows],
                         "state": self.state[wave][rows],
                     }
