@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
+import re
 import subprocess
 import sys
 from collections.abc import Mapping
@@ -381,7 +382,7 @@ def test_an_unknown_stage_lists_those_installed(edf: Path, tmp_path: Path, capsy
     assert "anchors" in said
 
 
-@pytest.mark.parametrize("argv", [["--help"], ["mark", "--help"], ["look", "-h"], ["convert", "-h"], ["demo", "-h"], ["stages", "-h"]])
+@pytest.mark.parametrize("argv", [["--help"], ["mark", "--help"], *([n, "-h"] for n in ("look", "convert", "simulate", "demo", "stages"))])
 def test_help_teaches_and_cautions(argv: list[str], capsys: pytest.CaptureFixture[str]) -> None:
     assert cli.main(argv) == 0
     said = " ".join(capsys.readouterr().out.split())
@@ -459,7 +460,7 @@ def test_demo_runs_twice_and_says_what_to_look_at(tmp_path: Path, capsys: pytest
         assert cli.main(["demo", "--out", str(tmp_path / "d"), "--minutes", "0.5"]) == 0
         said = capsys.readouterr().out
         assert "demo.png" in said
-        assert "not a patient" in said
+        assert "no person" in said
     assert {"demo.edf", "demo.png", "demo_marked.edf", "demo_beats.csv"} <= {p.name for p in (tmp_path / "d").iterdir()}
 
 
@@ -473,3 +474,40 @@ def test_stages_says_what_is_installed_and_whence(capsys: pytest.CaptureFixture[
     said = capsys.readouterr().out
     for word in ("anchors", "quality", "waves", "measure", "qrs", "upstroke", "edf", "wfdb", ".hea", f"caval {caval.__version__}"):
         assert word in said
+
+
+def test_simulate_writes_the_record_and_its_truth(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    options = ["--minutes", "0.3", "--seed", "5", "--set", "rhythm.heart_rate=80"]
+    assert cli.main(["simulate", "healthy", str(tmp_path / "one.edf"), *options]) == 0
+    assert sorted(listing(tmp_path)) == ["one.edf", "one_truth_beats.csv", "one_truth_marks.csv", "one_truth_spans.csv"]
+    marks = pd.read_csv(tmp_path / "one_truth_marks.csv")
+    assert {"a", "c", "x", "v", "y"} <= set(marks["mark"])
+    assert "truth/a" in caval.read(tmp_path / "one.edf").annotations.texts
+    assert "mean 1 to 5" in capsys.readouterr().out
+
+
+def test_simulate_is_the_same_for_the_same_seed(tmp_path: Path) -> None:
+    for name in ("one", "two"):
+        assert cli.main(["simulate", "fibrillation", str(tmp_path / f"{name}.hea"), "--minutes", "0.2", "--seed", "9", "-q"]) == 0
+    assert (tmp_path / "one.dat").read_bytes() == (tmp_path / "two.dat").read_bytes()
+
+
+@pytest.mark.parametrize(
+    ("words", "said"),
+    [
+        (["nobody", "x.edf"], "no scenario 'nobody'; there are: .*healthy"),
+        (["healthy", "x.edf", "--set", "ra.e_rest=-1"], r"ra\.e_rest = -1.*allowed are 0\.005 to 5"),
+        (["healthy", "x.edf", "--set", "rhythm.heart_rate=0"], "heart_rate = 0"),
+        (["healthy", "x.edf", "--set", "blood_volume_ml=900"], "blood_volume_ml = 900.*more is needed"),
+        (["healthy", "x.edf", "--minutes", "0"], "minutes = 0"),
+    ],
+)
+def test_simulate_names_what_cannot_be(
+    words: list[str], said: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    assert cli.main(["simulate", *words]) == 1
+    error = capsys.readouterr().err
+    assert re.search(said, error)
+    assert error.count("\n") == 1
+    assert listing(tmp_path) == {}

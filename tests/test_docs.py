@@ -36,7 +36,7 @@ def test_the_check_runs_the_readmes_own_command() -> None:
 def test_readme_has_every_mark_command_and_the_caution() -> None:
     for wave in WAVES:
         assert f"\n| {wave} | " in README
-    for name in ("mark", "look", "convert", "demo", "stages"):
+    for name in ("mark", "look", "convert", "simulate", "demo", "stages"):
         assert f"caval {name}" in README
         assert name in {c.name or c.callback.__name__ for c in cli.app.registered_commands if c.callback}
     assert "not a medical device" in README

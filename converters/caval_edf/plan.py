@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from caval.errors import InputError
 from caval.recording import Calibration, Channel, Recording
-from caval_edf.header import number_field
+from caval_edf.header import number_field, plain
 
 __all__ = ["Plan", "calibration_for", "plan_channel", "record_duration"]
 
@@ -76,6 +76,8 @@ def _own_duration(recording: Recording) -> list[Fraction]:
 
 def plan_channel(channel: Channel, duration_s: Fraction, sample_bytes: int) -> Plan:
     """How `channel` goes into data records of `duration_s`; InputError when its integers do not fit."""
+    if plain(channel.label) in ("EDF Annotations", "BDF Annotations"):
+        raise InputError(f"channel {channel.label!r}: readers take a signal of this name for annotations; rename it first")
     channel = _on_the_clock(channel)
     calibration = calibration_for(channel, sample_bytes)
     if calibration is None:
@@ -149,7 +151,7 @@ def _on_the_clock(channel: Channel) -> Channel:
     n_samples = max(0, channel.n_samples - shift)
 
     def source(start: int, stop: int) -> NDArray:
-        stored = channel.digital(min(max(0, start + shift), channel.n_samples), max(0, stop + shift))
+        stored = channel.digital(*(min(max(0, place + shift), channel.n_samples) for place in (start, stop)))
         ahead = stop - start - len(stored)  # samples before the first
         return np.concatenate([np.full(ahead, channel.digital(0, 1)[0], dtype=stored.dtype), stored]) if ahead else stored
 

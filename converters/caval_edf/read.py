@@ -27,7 +27,7 @@ def read_edf(path: Path) -> Recording:
 
     Every signal keeps its own rate and its stored integers; header text that another format cannot hold stays in `header` under
     ``edf.`` names. Annotations of all annotation signals are in ``tracks["annotations"]``, on the clock of the first sample. Gaps
-    between the data records of EDF+D, and those that caval's own writer notes (``BAD_CVP/gap``), are gaps of the channels.
+    between the data records of EDF+D, and those that caval's own writer notes (``BAD_CVP/missing``), are gaps of the channels.
 
     Raises
     ------
@@ -121,7 +121,9 @@ def _channel(
     stored = _stored(records, position * header.sample_bytes, per_record, header.sample_bytes)
     count, gaps = header.n_records * per_record, np.empty((0, 2), dtype=np.int64)
     if onsets is not None and per_record:
-        first = np.rint(onsets * rate).astype(np.int64)
+        # one rounding for all, and none that lets a record begin before the one ahead of it ends
+        ahead = np.arange(header.n_records, dtype=np.int64) * per_record
+        first = np.maximum.accumulate(np.floor(onsets * rate + 0.5 + 1e-6).astype(np.int64) - ahead) + ahead
         stored, count, gaps = _on_the_clock(stored, first, per_record)
     text = {f"edf.{k}": v for k, v in signal.text.items() if k in ("label", "unit", "physical_min", "physical_max", "reserved")}
     limits = Calibration(signal.digital_min, signal.digital_max, signal.physical_min, signal.physical_max)
@@ -184,8 +186,8 @@ def _with_noted_gaps(recording: Recording) -> Recording:
                 np.rint(times * channel.sampling_rate).astype(np.int64)
                 for times in (track.onset_s[is_gap], (track.onset_s + track.duration_s)[is_gap], track.onset_s[is_fill])
             )
-            gaps = np.concatenate([channel.gaps, np.stack([start, stop], axis=1)])
-            count = int(min([channel.n_samples, *fill]))
+            count = max(0, int(min([channel.n_samples, *fill])))
+            gaps = np.concatenate([channel.gaps, np.clip(np.stack([start, stop], axis=1), 0, count)])
             channel = replace(channel, n_samples=count, gaps=gaps[np.argsort(gaps[:, 0], kind="stable")])
         channels.append(channel)
     if not noted.any():

@@ -18,7 +18,8 @@ from caval_edf.header import plain
 
 __all__ = ["FILL", "GAP", "decode", "encode", "hole_texts", "seconds_text", "spread"]
 
-GAP, FILL = "gap", "fill"
+GAP, FILL = "missing", "fill"
+"""Not the kinds of `caval.vocabulary.SPANS`: what a stage says of a channel is no statement about its samples."""
 
 
 def hole_texts(labels: Sequence[str], kind: str) -> list[str]:
@@ -27,7 +28,7 @@ def hole_texts(labels: Sequence[str], kind: str) -> list[str]:
     Channels of one label are told apart by number.
 
     >>> hole_texts(["CVP", "P", "P"], GAP)
-    ['BAD_CVP/gap', 'BAD_P/gap', 'BAD_P#2/gap']
+    ['BAD_CVP/missing', 'BAD_P/missing', 'BAD_P#2/missing']
     """
     seen: Counter[str] = Counter()
     texts = []
@@ -59,10 +60,7 @@ def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], li
                 continue
             stamp, *words = body.split(b"\x14")
             onset, _, duration = stamp.partition(b"\x15")
-            try:
-                at, lasts = float(onset), float(duration or 0)
-            except ValueError:
-                raise FileError(f"{name}: data record {number} holds an annotation at {onset[:20]!r}, which is no time") from None
+            at, lasts = _seconds(onset, name, number), _seconds(duration or b"0", name, number)
             if np.isnan(starts[number]) and not any(words[:1]):
                 starts[number] = at
                 words = words[1:]
@@ -71,6 +69,16 @@ def decode(records: Sequence[bytes], name: str) -> tuple[NDArray[np.float64], li
                 durations.append(lasts)
                 texts.append(_decoded(word))
     return starts, onsets, durations, texts
+
+
+def _seconds(text: bytes, name: str, number: int) -> float:
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not math.isfinite(value):
+        raise FileError(f"{name}: data record {number} holds an annotation at {text[:20]!r}, which is no time")
+    return value
 
 
 def _decoded(word: bytes) -> str:
@@ -98,7 +106,10 @@ def encode(onset_s: float, duration_s: float, text: str) -> bytes:
 
 
 def spread(stamps: Sequence[bytes], tals: Sequence[bytes], homes: NDArray[np.int64]) -> tuple[list[bytes], int]:
-    """Annotations laid into data records, each into its own (`homes`) or the next with room, and the bytes a record then needs.
+    """Annotations laid into data records, and the bytes a record then needs.
+
+    Each goes into its own record (`homes`) or the next with room. Where the records that follow are too few, crowded ones go into
+    earlier records, which EDF+ allows: all records have one size, and the size comes from the mean and not from the crowd.
 
     Parameters
     ----------
@@ -110,17 +121,25 @@ def spread(stamps: Sequence[bytes], tals: Sequence[bytes], homes: NDArray[np.int
         The record in which each would best stand, ascending.
     """
     sizes = [len(t) for t in tals]
-    home = homes.tolist()
     stamp = max(len(s) for s in stamps)
-    room = stamp + max(max(sizes, default=0), -(-sum(sizes) * 11 // (10 * len(stamps))))
-    while True:
-        laid, waiting = [], 0
-        for number, start in enumerate(stamps):
-            first, used = waiting, len(start)
-            while waiting < len(tals) and home[waiting] <= number and used + sizes[waiting] <= room:
-                used += sizes[waiting]
-                waiting += 1
-            laid.append(start + b"".join(tals[first:waiting]))
-        if waiting == len(tals):
-            return laid, room
-        room += -(-sum(sizes[waiting:]) * 11 // (10 * len(stamps))) + 1
+    capacity = max(sizes, default=0) + -(-sum(sizes) * 11 // (10 * len(stamps)))
+    ready = np.minimum(homes, _latest(sizes, capacity, len(stamps))).tolist()
+    laid, waiting = [], 0
+    for number, start in enumerate(stamps):
+        first, used = waiting, 0
+        while waiting < len(tals) and ready[waiting] <= number and used + sizes[waiting] <= capacity:
+            used += sizes[waiting]
+            waiting += 1
+        laid.append(start + b"".join(tals[first:waiting]))
+    return laid, stamp + capacity
+
+
+def _latest(sizes: Sequence[int], capacity: int, n_records: int) -> NDArray[np.int64]:
+    """The last record in which each annotation may stand so that all after it find room, the records filled from the end."""
+    latest, number, used = np.empty(len(sizes), dtype=np.int64), n_records - 1, 0
+    for i in range(len(sizes) - 1, -1, -1):
+        if used + sizes[i] > capacity:
+            number, used = number - 1, 0
+        used += sizes[i]
+        latest[i] = number
+    return latest

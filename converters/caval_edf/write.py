@@ -30,7 +30,7 @@ def write_edf(recording: Recording, path: Path) -> tuple[Path, ...]:
 
     Stored integers and calibration limits are copied. A channel of floats gets a fixed range for its kind (pressures steps of
     0.01 mmHg, ECG of 1 µV), ten times wider as often as the data need it. Gaps and missing values are noted as
-    annotations ``BAD_LABEL/gap``, and the samples that fill the last data record up (the last value, repeated) as ``BAD_LABEL/fill``;
+    annotations ``BAD_LABEL/missing``, and the samples that fill the last data record up (the last value, repeated) as ``BAD_LABEL/fill``;
     the reader turns both back. A channel that begins before or after 0 s (a skew) is laid on the record's clock to the nearest sample:
     what lies before 0 is left out, as every reader of skewed records does. Patient, recording, transducer and prefilter text is
     written without accents and cut at the 80 characters of its field; free text becomes the last subfield that EDF+ allows there.
@@ -52,7 +52,7 @@ def write_edf(recording: Recording, path: Path) -> tuple[Path, ...]:
     start = recording.start_time
     fraction_s = start.microsecond / 1e6 if start is not None else 0.0
     track = recording.annotations
-    track = track.join(_gap_track(plans, n_records, track))
+    track = track.join(_gap_track(plans, n_records))
     annotations, width = _annotation_signal(track, n_records, float(duration), fraction_s, sample_bytes)
     try:
         with open(path, "wb") as stream:
@@ -83,16 +83,13 @@ def _is_not_ours(track: Track) -> NDArray[np.bool_]:
     return np.array([parse_text(text) is None for text in track.texts] + [True], dtype=bool)[track.code]
 
 
-def _gap_track(plans: list[Plan], n_records: int, track: Track) -> Track:
-    """What has no value: holes of the channels, less those that `track` notes already, and the fill of the last data record."""
+def _gap_track(plans: list[Plan], n_records: int) -> Track:
+    """What has no value: holes of the channels, and the fill of the last data record."""
     names = [hole_texts([p.channel.label for p in plans], kind) for kind in (GAP, FILL)]
-    known = track.take(np.array([text in names[0] for text in track.texts] + [False])[track.code])
-    noted = {(str(t), round(on, 3), round(lasts, 3)) for t, on, lasts in zip(known.text, known.onset_s, known.duration_s, strict=True)}
     rows: list[tuple[str, float, float]] = []
     for plan, gap_name, fill_name in zip(plans, *names, strict=True):
         n, filled, rate = plan.channel.n_samples, n_records * plan.per_record, plan.channel.sampling_rate
-        spans = [(gap_name, start / rate, (stop - start) / rate) for start, stop in plan.holes.tolist()]
-        rows += [row for row in spans if (row[0], round(row[1], 3), round(row[2], 3)) not in noted]
+        rows += [(gap_name, start / rate, (stop - start) / rate) for start, stop in plan.holes.tolist()]
         if filled > n:
             rows.append((fill_name, n / rate, (filled - n) / rate))
     return Track.build([r[1] for r in rows], [r[0] for r in rows], duration_s=[r[2] for r in rows])

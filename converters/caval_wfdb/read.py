@@ -180,7 +180,7 @@ def _with_kept(recording: Recording, comments: tuple[str, ...]) -> Recording:
     kept: dict[int, dict[str, str]] = {}
     for comment in comments:
         words = comment.split(" ", 3)
-        if len(words) == 4 and words[0] == "caval" and words[1].isdigit():
+        if len(words) == 4 and words[0] == "caval" and words[1].isascii() and words[1].isdecimal():
             kept.setdefault(int(words[1]), {})[words[2]] = words[3]
     if not kept:
         return recording
@@ -198,11 +198,12 @@ def _restored(channel: Channel, kept: dict[str, str]) -> Channel:
         if "limits" in kept and calibration is not None:
             low, high, physical_low, physical_high = kept["limits"].split()
             missing = None if "rail" in kept or "whole" in kept else calibration.missing
-            calibration = Calibration(int(low), int(high), float(physical_low), float(physical_high), missing)
-        n_samples = min(int(kept.get("n_samples", channel.n_samples)), channel.n_samples)
+            told = Calibration(int(low), int(high), float(physical_low), float(physical_high), missing)
+            calibration = told if _agree(told, calibration) else calibration
+        n_samples = max(0, min(int(kept.get("n_samples", channel.n_samples)), channel.n_samples))
         ranges = [[int(end) for end in text.split("-")] for text in kept.get("gaps", "").split()]
-        gaps = np.array(ranges, dtype=np.int64).reshape(-1, 2) if ranges else channel.gaps
-    except ValueError:
+        gaps = np.clip(np.array(ranges, dtype=np.int64).reshape(-1, 2), 0, n_samples) if ranges else channel.gaps
+    except (ValueError, OverflowError):
         return channel  # an edited comment is no reason to fail
     unit = kept.get("unit", channel.unit)
     return replace(
@@ -210,3 +211,11 @@ def _restored(channel: Channel, kept: dict[str, str]) -> Channel:
         unit="" if unit == NO_UNIT else unit,
         transducer=kept.get("transducer", ""), prefilter=kept.get("prefilter", ""),
     )
+
+
+def _agree(told: Calibration, line: Calibration) -> bool:
+    """Whether kept limits say what the signal line says, but for its whole-number baseline; a line that was edited since wins."""
+    if told.digital_min >= told.digital_max or not np.isfinite([told.physical_min, told.physical_max]).all():
+        return False
+    apart = told.to_physical(np.zeros(1)) - line.to_physical(np.zeros(1))
+    return bool(abs(told.scale / line.scale - 1) < 1e-6 and abs(apart[0]) < 0.51 * abs(line.scale))

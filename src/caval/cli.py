@@ -261,7 +261,7 @@ def simulate(
 @app.command(epilog=_epilog("caval demo", "caval demo --out elsewhere --minutes 3"))
 def demo(
     out: Annotated[Path, typer.Option("--out", "-o", metavar="DIR", help="Folder for the record and what is found in it.")] = Path("demo"),
-    minutes: Annotated[float | None, typer.Option(min=0.2, max=60.0, help="Length of the record; 6 by default.", show_default=False)] = None,
+    minutes: Annotated[float | None, typer.Option(min=0.2, max=60.0, help="Length; 6 by default.", show_default=False)] = None,
     quiet: Quiet = False,
     debug: Debug = False,
 ) -> None:
@@ -285,8 +285,8 @@ def demo(
         typer.echo(
             f"\nOpen {out / 'demo.png'}: ECG, venous and arterial pressure with every wave marked, the median beat, the trend.\n"
             "The patient is a model, no person. Worth a look: the flush at 45 s and the zeroing at 90 s are named in\n"
-            f"{out / 'demo_spans.csv'} and carry no marks; the diathermy at 130 and 150 s costs no beat, because the arterial trace shows it;\n"
-            "the venous pressure rises with the fluid given from 170 s; from 300 s on the atrium fibrillates.\n"
+            f"{out / 'demo_spans.csv'} and carry no marks; the diathermy at 130 and 150 s costs no beat, because the arterial trace\n"
+            "shows it; the venous pressure rises with the fluid given from 170 s; from 300 s on the atrium fibrillates.\n"
             f"What is true of it stands in {out / 'demo_truth_marks.csv'}.\n"
             f"Next: caval look {record}, then caval mark YOUR_RECORD --out DIR"
         )

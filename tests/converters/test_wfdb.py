@@ -193,9 +193,19 @@ def test_units_that_other_readers_cannot_take_come_back(tmp_path: Path) -> None:
     assert wfdb.rdheader(str(path.with_suffix(""))).units == ["uV", "cmH2O", "mmHg", "NU", "degC", "%"]
 
 
+def test_a_gain_that_was_mended_by_hand_wins_over_our_comment(tmp_path: Path) -> None:
+    limits = Calibration(-32768, 32767, -100.0, 100.0)
+    sent = Recording.from_arrays({"CVP": (np.arange(125, dtype=np.int16), 125.0, "mmHg")}, name="rec", calibrations={"CVP": limits})
+    path = write(tmp_path, sent)
+    text = path.read_text()
+    path.write_text(text.replace(text.split()[6], "50(0)/mmHg"))
+    np.testing.assert_allclose(caval.read(path).read("CVP"), np.arange(125) / 50)
+
+
 def test_an_edited_comment_of_ours_is_no_reason_to_fail(tmp_path: Path) -> None:
     path = write(tmp_path, record())
-    path.write_text(path.read_text() + "# caval 1 limits none\n# caval 99 label x\n# caval\n# caval 0 n_samples ten\n")
+    edits = ("1 limits none", "99 label x", "0 limits 5 5 1 1", "2 limits 0 1 nan inf", "³ n_samples 3", "", "0 n_samples ten")
+    path.write_text(path.read_text() + "".join(f"# caval {edit}\n" for edit in edits))
     got = caval.read(path)
     np.testing.assert_array_equal(got.channels[1].digital(), record().channels[1].digital())
 

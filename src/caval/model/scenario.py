@@ -42,8 +42,14 @@ from caval.model.parameters import Circulation, preset
 __all__ = ["EVENTS", "Scenario", "load_scenario", "scenario_names"]
 
 EVENTS: dict[str, type[Event]] = {
-    "flush": lines.Flush, "zeroing": lines.Zeroing, "sampling": lines.BloodSampling, "disconnection": lines.Disconnection, "clot": lines.Clot,
-    "height_step": lines.HeightStep, "movement": lines.Movement, "diathermy": lines.Diathermy,
+    "flush": lines.Flush,
+    "zeroing": lines.Zeroing,
+    "sampling": lines.BloodSampling,
+    "disconnection": lines.Disconnection,
+    "clot": lines.Clot,
+    "height_step": lines.HeightStep,
+    "movement": lines.Movement,
+    "diathermy": lines.Diathermy,
 }
 """Events by the kind that a scenario calls them."""
 
@@ -180,6 +186,7 @@ def load_scenario(name: str | Path) -> Scenario:
     for key in content:
         if key not in known:
             raise InputError(f"scenario {name} has {key!r}; a scenario has: {', '.join(known)}")
-    scenario = Scenario(stem, **{k: tuple(v) if isinstance(v, list) else v for k, v in content.items()})
+    parts: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in content.items()}
+    scenario = Scenario(stem, **parts)
     scenario.check()
     return scenario

@@ -34,7 +34,7 @@ class _Extrema:
 
     @classmethod
     def of(cls, trace: Floats, rate: float, sign: float) -> _Extrema:
-        index, _ = signal.find_peaks(sign * trace)
+        index, _ = signal.find_peaks(sign * trace, plateau_size=(1, round(0.2 * rate)))
         prominence = signal.peak_prominences(sign * trace, index, wlen=round(_PROMINENCE_WINDOW_S * rate) | 1)[0] if len(index) else np.empty(0)
         keep = prominence >= _LEAST_MMHG
         index = index[keep]

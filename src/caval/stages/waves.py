@@ -111,8 +111,8 @@ class _Trace:
     @staticmethod
     def _extrema(smooth: Signal, sign: float) -> _Extrema:
         heights = sign * smooth.values
-        index, _ = signal.find_peaks(heights)
         window = round(_PROMINENCE_WINDOW_S * smooth.sampling_rate) | 1
+        index, _ = signal.find_peaks(heights, plateau_size=(1, window // 2))  # a longer plateau is a stuck trace, no wave
         prominence = signal.peak_prominences(heights, index, wlen=window)[0] if len(index) else np.empty(0)
         time = smooth.start_s + refine(heights, index) / smooth.sampling_rate
         return _Extrema(sign, time, heights[index], prominence)
