@@ -264,7 +264,7 @@ def _others(p: Circulation) -> Floats:
     q, h = p.pericardium, p.heart
     return np.array([
         q.k_mmhg, q.v0_ml, q.phi_ml, q.muscle_ml + q.fluid_ml, h.leaflet_c, h.leaflet_lag_s, h.annulus_share, h.annulus_lag_s,
-        p.pulmonary_inlet, p.micro_upper, p.micro_kidneys, p.micro_splanchnic, p.micro_legs,
+        p.pulmonary_inlet, p.micro_upper, p.micro_kidneys, p.micro_splanchnic, p.micro_legs, h.annulus_recoil,
     ])
 
 
@@ -389,5 +389,6 @@ def _integrate(
         v[13] += dt * (q_lung - q_pv)
         shut = 1.0 - z[0]
         leaflet += dt * (other[4] * shut * max(press[1] - press[0], 0.0) - leaflet) / other[5]
-        annulus += dt * (other[6] * (full - v[1]) - annulus) / other[7]
+        drawn = 1.0 - other[13] * (1.0 - ventricle[k])
+        annulus += dt * (other[6] * drawn * (full - v[1]) - annulus) / other[7]
     return out

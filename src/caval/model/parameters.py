@@ -66,7 +66,7 @@ class Pericardium:
     """Pressure k·exp((V − v0)/φ) on the whole heart; V counts the blood in the four chambers, the muscle and the fluid."""
 
     k_mmhg: float = _value(0.5, 0.0, 50.0, "mmHg", "Mynard & Smolich 2015")
-    v0_ml: float = _value(641.0, 50.0, 2000.0, "ml", "Mynard & Smolich 2015")
+    v0_ml: float = _value(655.0, 50.0, 2000.0, "ml", "Mynard & Smolich 2015")
     phi_ml: float = _value(40.0, 1.0, 500.0, "ml", "Mynard & Smolich 2015")
     muscle_ml: float = _value(260.0, 0.0, 1000.0, "ml", "from memory")
     fluid_ml: float = _value(20.0, 0.0, 2000.0, "ml", "from memory; an effusion adds to it")
@@ -80,21 +80,22 @@ class Heart:
     ventricle_peak_s: float = _value(0.29, 0.05, 1.0, "s", "time to peak elastance at an interval of 1 s, grows with its square root; from memory")
     atrium_delay_s: float = _value(0.04, 0.0, 0.2, "s", "P onset to first atrial tension; from memory")
     atrium_length_s: float = _value(0.18, 0.03, 0.5, "s", "length of atrial contraction; calibrated to P onset → a of 80 to 100 ms")
-    leaflet_c: float = _value(0.16, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
-    leaflet_lag_s: float = _value(0.015, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
-    annulus_share: float = _value(0.18, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
-    annulus_lag_s: float = _value(0.02, 0.002, 0.2, "s", "calibrated to x")
+    leaflet_c: float = _value(0.15, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
+    leaflet_lag_s: float = _value(0.010, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
+    annulus_share: float = _value(0.50, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
+    annulus_lag_s: float = _value(0.03, 0.002, 0.2, "s", "calibrated to x")
+    annulus_recoil: float = _value(0.62, 0.0, 1.0, "1", "share of the descent that goes with the ventricle's tension, before it refills; calibrated to v")
 
 
 @dataclass(frozen=True)
 class Circulation:
     """The closed loop. Build others with `with_values`."""
 
-    blood_volume_ml: float = _value(5400.0, 300.0, 12000.0, "ml", f"{_HELDT} has 5700; calibrated to a mean right-atrial pressure of 3")
-    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.28, 0.68))
-    rv: Chamber = field(default_factory=lambda: Chamber.of(46.0, 0.05, 0.60))
-    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.20, 0.50))
-    lv: Chamber = field(default_factory=lambda: Chamber.of(30.0, 0.085, 1.9))
+    blood_volume_ml: float = _value(5300.0, 300.0, 12000.0, "ml", f"{_HELDT} has 5700; calibrated to a mean right-atrial pressure of 3")
+    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.25, 0.43))
+    rv: Chamber = field(default_factory=lambda: Chamber.of(22.0, 0.065, 0.52))
+    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.28, 0.47))
+    lv: Chamber = field(default_factory=lambda: Chamber.of(18.0, 0.10, 3.1))
     tricuspid: Valve = field(default_factory=lambda: Valve(8.0, 0.0, 40.0, 53.0, 1.5))
     pulmonary: Valve = field(default_factory=lambda: Valve(5.0, 0.0, 27.0, 27.0, 1.5))
     mitral: Valve = field(default_factory=lambda: Valve(6.0, 0.0, 27.0, 53.0, 1.5))
