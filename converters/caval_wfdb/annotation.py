@@ -22,6 +22,7 @@ _ORDER = '_NLRaVFJASEj/Q~_|_sT*D"=pB^t+u?![]en@xf()r'
 SYMBOLS = {code: symbol for code, symbol in enumerate(_ORDER) if symbol != "_"}
 """Symbol of each annotation code that has one."""
 _CODES = {symbol: code for code, symbol in SYMBOLS.items() if symbol} | {f"code{c}": c for c in range(1, 50) if not SYMBOLS.get(c)}
+_FIELDS = ("subtype", "chan", "num")
 BEAT_SYMBOLS = frozenset("NLRBAaJSVrFejnE/fQ?")
 """Symbols of the codes that stand for a beat."""
 
@@ -29,8 +30,8 @@ BEAT_SYMBOLS = frozenset("NLRBAaJSVrFejnE/fQ?")
 def read_annotations(path: Path, *, default_rate: float | None = None) -> Track:
     """An annotation file as a Track: notes give their text, other codes their symbol, and their text after it.
 
-    Pairs of notes that end in `` begin`` and `` end`` are joined to spans. `extra` has ``symbol``, ``subtype`` and ``num``; `channel` is
-    the file's ``chan`` for our own texts, and -1 otherwise, since most files leave it 0 for want of a channel.
+    Pairs of notes that end in `` begin`` and `` end`` are joined to spans. `extra` has ``symbol``, ``subtype``, ``chan`` and ``num``;
+    `channel` is ``chan`` for our own texts, and -1 otherwise, since most files leave it 0 for want of a channel.
 
     Parameters
     ----------
@@ -40,16 +41,18 @@ def read_annotations(path: Path, *, default_rate: float | None = None) -> Track:
     Raises
     ------
     FileError
-        Not an annotation file, truncated, or a file that states no ticks a second beside no header.
+        No such file, not an annotation file, truncated, or a file that states no ticks a second beside no header.
     """
     path = Path(path)
+    if not path.is_file():
+        raise FileError(f"no such file: {path}")
     columns, rate = decode(path.read_bytes(), path.name)
     rate = rate or default_rate or _rate_of_header(path)
     symbols = np.array([SYMBOLS.get(int(c)) or f"code{c}" for c in columns["code"]], dtype=object)
     noted = np.array([f"{s} {t}".rstrip() for s, t in zip(symbols, columns["text"], strict=True)], dtype=object)
     text = np.where(columns["code"] == NOTE_CODE, columns["text"], noted)
     onset = columns["tick"] / rate
-    extra = {"symbol": symbols, "subtype": columns["subtype"], "num": columns["num"]}
+    extra = {"symbol": symbols, **{name: columns[name] for name in _FIELDS}}
     ours = np.array([t.startswith(("CVP/", "BAD_")) for t in text], dtype=bool)
     channel = np.where(ours, columns["chan"], -1) if len(text) else columns["chan"]
     return _joined(Track.build(onset, text, channel=channel, extra=extra))
@@ -85,7 +88,7 @@ def _joined(track: Track) -> Track:
     return Track.build(track.onset_s[keep], words[keep], duration_s=duration[keep], channel=track.channel[keep], extra=extra)
 
 
-def track_bytes(track: Track, ticks_per_s: float, *, default_channel: int = 0) -> bytes:
+def track_bytes(track: Track, ticks_per_s: float) -> bytes:
     """A Track as an annotation file: beats and other codes by their symbol, all else as notes, spans as two of them.
 
     A beat's letter that stands alone as a text is a beat. A note at tick 0 is written at tick 1: wfdb's reader takes notes at 0 for
@@ -105,13 +108,13 @@ def track_bytes(track: Track, ticks_per_s: float, *, default_channel: int = 0) -
     code = codes[kind[row]]
     tick[(tick == 0) & (code == NOTE_CODE)] = 1
     order = np.argsort(tick, kind="stable")
-    row, zeros = row[order], np.zeros(len(row), dtype=np.int64)
+    row = row[order]
+    fields = {name: track.extra[name][row] if name in track.extra else np.zeros(len(row), dtype=np.int64) for name in _FIELDS}
     columns = {
         "tick": tick[order],
         "code": code[order],
-        "subtype": track.extra["subtype"][row] if "subtype" in track.extra else zeros,
-        "chan": np.where(track.channel[row] >= 0, track.channel[row], default_channel),
-        "num": track.extra["num"][row] if "num" in track.extra else zeros,
+        **fields,
+        "chan": np.where(track.channel[row] >= 0, track.channel[row], fields["chan"]),
         "text": words[2 * kind[row] + is_end[order]],
     }
     return encode(columns, ticks_per_s)
@@ -124,5 +127,5 @@ def _form(symbol: str, text: str, *, is_span: bool) -> tuple[int, str, str]:
     if not symbol and (text in BEAT_SYMBOLS or text.startswith("+ (")):
         symbol = text[0]
     code = _CODES.get(symbol, NOTE_CODE)
-    word = text if code == NOTE_CODE else text.removeprefix(symbol).lstrip()
+    word = text if code == NOTE_CODE else "" if text == symbol else text.removeprefix(f"{symbol} ")
     return code, word, word

@@ -18,7 +18,7 @@ from caval.vocabulary import NOTE_CODE
 __all__ = ["decode", "encode"]
 
 _SKIP, _NUM, _SUB, _CHN, _AUX = 59, 60, 61, 62, 63
-_RESOLUTION = re.compile(r"## time resolution: ([0-9.]+(?:[eE][+-]?[0-9]+)?)")
+_RESOLUTION = re.compile(r"## time resolution: ([0-9]+(?:\.[0-9]*)?(?:[eE][+-]?[0-9]{1,2})?)(?:\s|$)")
 _MOST_TEXT = 255
 _LIMITS = {"subtype": (-128, 127), "chan": (0, 255), "num": (-128, 127)}
 
@@ -48,6 +48,8 @@ def decode(raw: bytes, name: str) -> tuple[dict[str, NDArray], float | None]:
         word = words[at]
         at += 1
         if word == 0:
+            if any(words[at:]):
+                raise FileError(f"{name} is no annotation file: {2 * (n - at)} bytes follow the end mark")
             break
         code, value = word >> 10, word & 0x3FF
         if code == _SKIP:

@@ -8,6 +8,7 @@ from datetime import datetime
 from pathlib import Path
 
 from caval.errors import FileError
+from caval.units import is_pressure_unit
 
 __all__ = ["NO_UNIT", "Header", "Segment", "SignalLine", "read_header", "safe_name"]
 
@@ -18,7 +19,7 @@ _DEFAULT_GAIN = 200.0
 _MOST_SIGNALS = 4096
 _LINE = re.compile(
     r"(?P<file>\S+)\s+(?P<fmt>\d+)(?:x(?P<spf>\d+))?(?::(?P<skew>\d+))?(?:\+(?P<offset>\d+))?"
-    r"(?:\s+(?P<gain>[-+0-9.eE]+)(?:\((?P<baseline>-?\d+)\))?(?:/(?P<unit>mm Hg|\S+))?"
+    r"(?:\s+(?P<gain>[-+0-9.eE]+)(?:\((?P<baseline>-?\d+)\))?(?:/(?P<unit>\S+|\S+(?:\s+[A-Za-z]\S*)+(?=\s+\d)))?"
     r"(?:\s+(?P<adcres>\d+)(?:\s+(?P<adczero>-?\d+)(?:\s+(?P<initial>-?\d+)(?:\s+(?P<checksum>-?\d+)(?:\s+(?P<block>\d+)"
     r"(?:\s+(?P<label>.*))?)?)?)?)?)?)?\s*$"
 )
@@ -160,7 +161,9 @@ def _signal(path: Path, line: str) -> SignalLine:
     baseline = int(t.get("baseline", zero))
     if (gain and not 1e-12 < abs(gain) < 1e12) or abs(baseline) > 2**53:
         raise FileError(f"{path.name}: gain {t.get('gain')!r} and baseline {baseline} give no calibration")
-    unit = t.get("unit", "mV" if gain else "").replace("mm Hg", "mmHg")
+    unit = t.get("unit", "")
+    if " " in unit and is_pressure_unit(unit):
+        unit = unit.replace(" ", "")
     return SignalLine(
         file=t["file"] if t["file"] == "~" else safe_name(t["file"], path.name),
         fmt=t["fmt"],

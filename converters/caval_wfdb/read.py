@@ -112,7 +112,9 @@ def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channe
     if header.n_frames is not None and header.n_frames != at:
         raise FileError(f"{hea.name} declares {header.n_frames} samples; its segments have {at}")
     template = layout if layout is not None else next((c for _, _, c in parts if c is not None), [])
-    return [_spliced(c, i, parts, at, header.frame_rate, layout is not None) for i, c in enumerate(template)], notes
+    if layout is None and any(len(c) != len(template) for _, _, c in parts if c is not None):
+        raise FileError(f"{hea.name}: its segments differ in their number of signals, and no layout segment comes first")
+    return [_spliced(c, i, template, parts, header.frame_rate, layout is not None) for i, c in enumerate(template)], notes
 
 
 def _layout_channel(line: SignalLine, header: Header) -> Channel:
@@ -122,15 +124,20 @@ def _layout_channel(line: SignalLine, header: Header) -> Channel:
 
 
 def _spliced(
-    template: Channel, number: int, parts: list[tuple[int, int, list[Channel] | None]], n_frames: int, frame_rate: float, by_label: bool
+    template: Channel, number: int, channels_of_all: list[Channel], parts: list[tuple[int, int, list[Channel] | None]],
+    frame_rate: float, by_label: bool,
 ) -> Channel:
-    """One channel over all segments. Where segments differ in calibration it holds physical values, else stored integers."""
+    """One channel over all segments, those of one label in their order. Where segments differ in calibration it holds physical values,
+    else stored integers."""
+    twins = sum(c.label == template.label for c in channels_of_all[:number])
+    n_frames = parts[-1][0] + parts[-1][1] if parts else 0
     width = round(template.sampling_rate / frame_rate)
     pieces: list[tuple[int, int, Channel | None]] = []
     for at, count, channels in parts:
         found = None
         if channels is not None:
-            found = next((c for c in channels if c.label == template.label), None) if by_label else channels[number]
+            same = [c for c in channels if c.label == template.label][twins:] if by_label else channels[number:]
+            found = same[0] if same else None
         if found is not None and (found.sampling_rate != template.sampling_rate or found.unit != template.unit):
             raise FileError(f"channel {template.label!r} changes its rate or unit from one segment to the next")
         pieces.append((at * width, (at + count) * width, found))
@@ -179,8 +186,8 @@ def _with_kept(recording: Recording, comments: tuple[str, ...]) -> Recording:
     """What our writer kept in comments (``caval NUMBER KEY VALUE``) back in its place: limits as text, true lengths, valid rails."""
     kept: dict[int, dict[str, str]] = {}
     for comment in comments:
-        words = comment.split(" ", 3)
-        if len(words) == 4 and words[0] == "caval" and words[1].isascii() and words[1].isdecimal():
+        words = [*comment.split(" ", 3), ""]  # an empty value leaves no word
+        if len(words) >= 4 and words[0] == "caval" and words[1].isascii() and words[1].isdecimal():
             kept.setdefault(int(words[1]), {})[words[2]] = words[3]
     if not kept:
         return recording

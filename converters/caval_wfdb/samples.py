@@ -22,6 +22,8 @@ _BYTES = {"16": 2.0, "61": 2.0, "160": 2.0, "212": 1.5, "310": 4 / 3, "311": 4 /
 """Bytes a sample, where a format has as many for each."""
 _PLAIN = {"16": ("<i2", 0), "61": (">i2", 0), "160": ("<u2", 32768), "80": ("u1", 128), "32": ("<i4", 0)}
 """Formats of whole bytes as NumPy has them, and the stored number that stands for 0."""
+_MOST_FRAMES_A_BYTE = 8192
+"""Of FLAC, whose tightest block holds 65,535 samples in 14 bytes."""
 
 
 def calibration_of(line: SignalLine) -> Calibration:
@@ -41,11 +43,15 @@ def frames_held(hea: Path, header: Header, lines: tuple[SignalLine, ...]) -> int
     if len({(line.fmt, line.offset) for line in lines}) > 1:
         raise FileError(f"{hea.name}: the signals of {path.name} differ in format or offset")
     size = path.stat().st_size - lines[0].offset
+    if size < 0:
+        raise FileError(f"{path.name} is truncated: its signals begin at byte {lines[0].offset}, it has {size + lines[0].offset}")
     per_sample = _BYTES.get(lines[0].fmt)
     declared = header.n_frames
     if per_sample is None:
         if declared is None:
             raise FileError(f"{hea.name} does not say how many samples {path.name} holds")
+        if declared > size * _MOST_FRAMES_A_BYTE:
+            raise FileError(f"{path.name} is truncated: {hea.name} declares {declared} frames, no {size} bytes hold them")
         return declared
     held = int(size / (per_sample * sum(line.samples_per_frame for line in lines)) + 1e-9)
     if declared is None:

@@ -4,24 +4,24 @@ from __future__ import annotations
 
 import os
 import re
+from dataclasses import replace
 from fractions import Fraction
 from math import gcd, lcm
 from pathlib import Path
 
 import numpy as np
-from numpy.typing import NDArray
 
 from caval.errors import FileError, InputError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
+from caval.vocabulary import parse_text
 from caval_wfdb.annotation import TRACK_ENDING, track_bytes
+from caval_wfdb.frames import BITS, write_samples
 from caval_wfdb.header import NO_UNIT
 
 __all__ = ["ticks_per_second", "write_marked", "write_wfdb"]
 
-_BLOCK_FRAMES = 1 << 16
 _SPELLINGS = str.maketrans({"µ": "u", "μ": "u", "₂": "2", "°": "deg"})
-_BITS = {"212": 12, "16": 16, "24": 24, "32": 32}
 
 
 def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
@@ -47,13 +47,13 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
     frame_rate, widths = _frame(recording)
     n_frames = max(-(-c.n_samples // w) for c, w in zip(recording.channels, widths, strict=True))
     fmt = _format(recording)
-    low, high = -(2 ** (_BITS[fmt] - 1)), 2 ** (_BITS[fmt] - 1) - 1
+    low, high = -(2 ** (BITS[fmt] - 1)), 2 ** (BITS[fmt] - 1) - 1
     calibrations = [c.integer_calibration(low + 1, high) for c in recording.channels]
     data, header = path.with_suffix(".dat"), path.with_suffix(".hea")
     written = [header, data]
     try:
         with open(data, "wb") as stream:
-            sums, firsts, rails = _write_samples(stream, recording, calibrations, widths, n_frames, fmt)
+            sums, firsts, rails = write_samples(stream, recording, calibrations, widths, n_frames, fmt)
             stream.flush()
             os.fsync(stream.fileno())
         lines = [_record_line(recording, name, frame_rate, n_frames)]
@@ -61,7 +61,7 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
         for i, (channel, calibration, width) in enumerate(zip(recording.channels, calibrations, widths, strict=True)):
             lines.append(_signal_line(channel, calibration, f"{name}.dat", fmt, width, frame_rate, firsts[i], sums[i]))
             comments += [f"caval {i} {key} {value}" for key, value in _kept(channel, calibration, width * n_frames, low, rails[i]).items()]
-        header.write_text("\n".join([*lines, *(f"# {c}" for c in comments)]) + "\n", encoding="utf-8")
+        header.write_text("\n".join([*lines, *(f"# {' '.join(c.splitlines())}" for c in comments)]) + "\n", encoding="utf-8")
         for ending, track in _by_ending(recording).items():
             target = path.with_suffix(f".{ending}")
             target.write_bytes(track_bytes(track, ticks_per_second(recording)))
@@ -74,18 +74,24 @@ def write_wfdb(recording: Recording, path: Path) -> tuple[Path, ...]:
 
 
 def write_marked(recording: Recording, track: Track, directory: Path, stem: str) -> tuple[Path, ...]:
-    """Write `track` as STEM.cvp; for a recording that is no WFDB record also the record itself.
+    """Write `track` as STEM.cvp; for a recording that is no WFDB record also the record itself, with the annotations of others.
 
-    A track without a mark gives no annotation file, whatever spans it has: a reader that finds one finds marks in it.
+    Marks of our own that an earlier run left in such a record give way to `track`. A track without a mark gives no annotation file,
+    whatever spans it has: a reader that finds one finds marks in it.
     """
     written: list[Path] = []
     if recording.format != "wfdb":
-        written += write_wfdb(recording, directory / f"{stem}.hea")
+        others = {name: _of_others(old) for name, old in recording.tracks.items()}
+        written += write_wfdb(replace(recording, tracks=others), directory / f"{stem}.hea")
     if len(track.marks()):
         target = directory / f"{stem}.{TRACK_ENDING}"
         target.write_bytes(track_bytes(track, ticks_per_second(recording)))
         written.append(target)
     return tuple(written)
+
+
+def _of_others(track: Track) -> Track:
+    return track.take(np.array([parse_text(text) is None for text in track.texts] + [True], dtype=bool)[track.code])
 
 
 def _by_ending(recording: Recording) -> dict[str, Track]:
@@ -122,61 +128,9 @@ def _format(recording: Recording) -> str:
     if ranges and len(ranges) == len(recording.channels) and all(c.header.get("wfdb.fmt") == "212" for c in recording.channels):
         return "212"
     for fmt in ("16", "24", "32"):
-        if -(2 ** (_BITS[fmt] - 1)) <= low and high < 2 ** (_BITS[fmt] - 1):
+        if -(2 ** (BITS[fmt] - 1)) <= low and high < 2 ** (BITS[fmt] - 1):
             return fmt
     raise InputError(f"integers from {low} to {high}: WFDB holds 32 bits")
-
-
-def _write_samples(
-    stream: object, recording: Recording, calibrations: list[Calibration], widths: list[int], n_frames: int, fmt: str
-) -> tuple[list[int], list[int], list[int]]:
-    """Write all frames; for each channel the sum of its samples, the first, and how many valid ones stand on the missing code."""
-    missing = -(2 ** (_BITS[fmt] - 1))
-    holes = [c.holes() for c in recording.channels]
-    sums, firsts, rails = ([0] * len(widths) for _ in range(3))
-    for first in range(0, n_frames, _BLOCK_FRAMES):
-        last = min(first + _BLOCK_FRAMES, n_frames)
-        columns = []
-        for i, (channel, calibration, width) in enumerate(zip(recording.channels, calibrations, widths, strict=True)):
-            values = _integers(channel, calibration, first * width, last * width, missing)
-            blank = np.zeros(len(values), dtype=bool)
-            blank[max(0, channel.n_samples - first * width) :] = True
-            for start, stop in holes[i]:
-                if stop > first * width and start < last * width:
-                    blank[max(0, start - first * width) : stop - first * width] = True
-            rails[i] += int(((values == missing) & ~blank).sum())
-            values[blank] = missing
-            sums[i] += int(values.sum(dtype=np.int64))
-            if first == 0:
-                firsts[i] = int(values[0]) if len(values) else 0
-            columns.append(values.reshape(last - first, width))
-        stream.write(_packed(np.concatenate(columns, axis=1).reshape(-1), fmt))  # type: ignore[attr-defined]
-    return sums, firsts, rails
-
-
-def _integers(channel: Channel, calibration: Calibration, start: int, stop: int, missing: int) -> NDArray[np.int64]:
-    n = channel.n_samples
-    stored = channel.digital(min(start, n), min(stop, n))
-    if channel.calibration is None:
-        finite = np.isfinite(stored)
-        stored = np.where(finite, calibration.to_digital(np.where(finite, stored, 0.0)), missing)
-    values = np.full(stop - start, missing, dtype=np.int64)
-    values[: len(stored)] = stored
-    return values
-
-
-def _packed(values: NDArray[np.int64], fmt: str) -> bytes:
-    if fmt == "16":
-        return values.astype("<i2").tobytes()
-    if fmt == "32":
-        return values.astype("<i4").tobytes()
-    if fmt == "24":
-        return np.ascontiguousarray(values.astype("<i4").view(np.uint8).reshape(-1, 4)[:, :3]).tobytes()
-    if len(values) % 2:
-        values = np.append(values, 0)
-    low, high = values[0::2] & 0xFFF, values[1::2] & 0xFFF
-    triple = np.stack([low & 0xFF, (low >> 8) | ((high >> 8) << 4), high & 0xFF], axis=1)
-    return triple.astype(np.uint8).tobytes()
 
 
 def _number(value: float) -> str:
@@ -203,7 +157,7 @@ def _signal_line(
             f"{1 / float(frame_rate):.6g} s before 0, no other"
         )
     checksum = (total + 32768) % 65536 - 32768
-    bits = {"212": 12, "16": 16, "24": 24, "32": 32}[fmt]
+    bits = BITS[fmt]
     place = f"{file} {fmt}" + (f"x{width}" if width > 1 else "") + (f":{skew}" if skew > 0 else "")
     return f"{place} {gain}({baseline})/{_unit(channel.unit)} {bits} 0 {first} {checksum} 0 {_plain(channel.label)}"
 

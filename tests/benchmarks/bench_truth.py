@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import argparse
 import warnings
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -51,6 +52,10 @@ def _outside(times: np.ndarray, spans: pd.DataFrame, made: Simulation) -> np.nda
     return times[edge & (overlaps(times - 1.0, times + 1.0, spans) < 0)]
 
 
+def _cell(row: Any) -> str:
+    return f"{row.sensitivity:.3f}/{row.precision:.3f} {row.error_ms:5.1f}" if row.n else f"none ({row.precision:.2f})"
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("scenario", nargs="*", help="names; all by default")
@@ -61,11 +66,12 @@ def main() -> None:
     chosen = parser.parse_args()
     warnings.simplefilter("ignore")
     settings = {k: float(v) for k, v in (s.split("=") for s in chosen.set)} | {"line.noise_mmhg": chosen.noise}
-    print(f"{'scenario':<28}" + "".join(f"{w:>22}" for w in (*WAVES, "R")) + "\n" + " " * 28 + f"{'sens/prec  error ms':>22}" * 6)
+    print(f"{'scenario':<28}" + "".join(f"{w:>22}" for w in (*WAVES, "R")))
+    print(" " * 28 + f"{'sens/prec  error ms':>22}" * 6)
     for name in chosen.scenario or scenario_names():
         made = simulate(name, minutes=chosen.minutes, seed=chosen.seed, settings=settings)
         table = compare(made, caval.mark(made.recording), chosen.noise)
-        cells = [f"{r.sensitivity:.3f}/{r.precision:.3f} {r.error_ms:5.1f}" if r.n else f"– ({r.precision:.2f})" for r in table.itertuples()]
+        cells = [_cell(row) for row in table.itertuples()]
         print(f"{name:<28}" + "".join(f"{c:>22}" for c in cells), flush=True)
 
 

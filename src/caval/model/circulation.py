@@ -35,6 +35,7 @@ _STEP_S = 0.0005
 _RHO = 1.06 / 1333.22  # blood, mmHg·s²/cm²
 _LEAK_CM2 = 1e-4  # a closed valve passes 0.05 ml/s at 100 mmHg
 _MMHG_PER_CMH2O = 0.735559
+_RING_PEAK, _RING_END = 0.7, 1.4  # of the ventricle's time to peak
 
 _VOLUMES = ("ra", "rv", "la", "lv", "arteries", "upper", "kidneys", "splanchnic", "legs", "abdominal", "ivc", "svc", "pulmonary_arteries",
             "pulmonary_veins")
@@ -189,11 +190,12 @@ def run(
         gift[(time >= infusion.onset_s) & (time < infusion.onset_s + infusion.duration_s)] += infusion.volume_ml / infusion.duration_s
     peak = parameters.heart.ventricle_peak_s * np.sqrt(np.clip(_before(r), 0.3, 1.5))
     ventricle = _ventricle(time, r + parameters.heart.ventricle_delay_s, peak)
+    ring = _ring(time, r + parameters.heart.ventricle_delay_s, peak)
     atrium = _atrium(time, p + parameters.heart.atrium_delay_s, parameters.heart.atrium_length_s)
     resets = np.clip(np.rint((r + warm_up_s) / step_s), -1, steps).astype(np.int64)
     out = _integrate(
         _start(parameters), _chambers(parameters), _valves(parameters), _vessels(parameters), _others(parameters),
-        atrium, ventricle, resets[resets >= 0], pleural, abdominal, gift, step_s, round(stride),
+        atrium, ventricle, ring, resets[resets >= 0], pleural, abdominal, gift, step_s, round(stride),
     )
     keep = slice(round(warm_up_s * rate), None)
     named = {name: out[keep, i] for i, name in enumerate(_OUT)}
@@ -233,6 +235,17 @@ def _ventricle(time: Floats, onset: Floats, peak: Floats) -> Floats:
         down = np.clip(since / 1.173, 0, 50.0) ** 21.9
         out = np.maximum(out, np.where(inside, 1.55 * up / (1 + up) / (1 + down), 0.0))
     return out
+
+
+def _ring(time: Floats, onset: Floats, peak: Floats) -> Floats:
+    """Pull of the long-axis fibres on the valve ring, 0 to 1: greatest before the ventricle's tension is, gone as filling begins.
+
+    The shape (a cosine hump over 0 to 1.4 times the time to peak, highest at 0.7 of it) is calibrated to the place of x and the width of v.
+    """
+    beat = np.searchsorted(onset, time, "right") - 1
+    since = np.where(beat >= 0, (time - onset[np.maximum(beat, 0)]) / peak[np.maximum(beat, 0)], 0.0)
+    up = np.sin(0.5 * np.pi * np.clip(since / _RING_PEAK, 0, 1)) ** 2
+    return up * np.cos(0.5 * np.pi * np.clip((since - _RING_PEAK) / (_RING_END - _RING_PEAK), 0, 1)) ** 2
 
 
 def _atrium(time: Floats, onset: Floats, length_s: float) -> Floats:
@@ -292,7 +305,7 @@ def _start(p: Circulation) -> Floats:
 
 @numba.njit(cache=True, fastmath=False)
 def _integrate(
-    v: Floats, chambers: Floats, valves: Floats, vessels: Floats, other: Floats, atrium: Floats, ventricle: Floats, resets: NDArray[np.int64],
+    v: Floats, chambers: Floats, valves: Floats, vessels: Floats, other: Floats, atrium: Floats, ventricle: Floats, ring: Floats, resets: NDArray[np.int64],
     pleural: Floats, abdominal: Floats, gift: Floats, dt: float, stride: int,
 ) -> Floats:
     """March the loop; a row of `_OUT` every `stride` steps."""
@@ -389,6 +402,6 @@ def _integrate(
         v[13] += dt * (q_lung - q_pv)
         shut = 1.0 - z[0]
         leaflet += dt * (other[4] * shut * max(press[1] - press[0], 0.0) - leaflet) / other[5]
-        drawn = 1.0 - other[13] * (1.0 - ventricle[k])
+        drawn = 1.0 - other[13] * (1.0 - ring[k])
         annulus += dt * (other[6] * drawn * (full - v[1]) - annulus) / other[7]
     return out

@@ -82,9 +82,9 @@ class Heart:
     atrium_length_s: float = _value(0.18, 0.03, 0.5, "s", "length of atrial contraction; calibrated to P onset → a of 80 to 100 ms")
     leaflet_c: float = _value(0.15, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
     leaflet_lag_s: float = _value(0.010, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
-    annulus_share: float = _value(0.50, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
-    annulus_lag_s: float = _value(0.03, 0.002, 0.2, "s", "calibrated to x")
-    annulus_recoil: float = _value(0.62, 0.0, 1.0, "1", "share of the descent that goes with the ventricle's tension, before it refills; calibrated to v")
+    annulus_share: float = _value(0.53, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
+    annulus_lag_s: float = _value(0.033, 0.002, 0.2, "s", "calibrated to x")
+    annulus_recoil: float = _value(0.53, 0.0, 1.0, "1", "share of the descent that goes with the ventricle's tension, before it refills; calibrated to v")
 
 
 @dataclass(frozen=True)
@@ -92,10 +92,10 @@ class Circulation:
     """The closed loop. Build others with `with_values`."""
 
     blood_volume_ml: float = _value(5300.0, 300.0, 12000.0, "ml", f"{_HELDT} has 5700; calibrated to a mean right-atrial pressure of 3")
-    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.25, 0.43))
-    rv: Chamber = field(default_factory=lambda: Chamber.of(22.0, 0.065, 0.52))
-    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.28, 0.47))
-    lv: Chamber = field(default_factory=lambda: Chamber.of(18.0, 0.10, 3.1))
+    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.235, 0.40))
+    rv: Chamber = field(default_factory=lambda: Chamber.of(23.0, 0.065, 0.51))
+    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.27, 0.44))
+    lv: Chamber = field(default_factory=lambda: Chamber.of(18.0, 0.102, 3.1))
     tricuspid: Valve = field(default_factory=lambda: Valve(8.0, 0.0, 40.0, 53.0, 1.5))
     pulmonary: Valve = field(default_factory=lambda: Valve(5.0, 0.0, 27.0, 27.0, 1.5))
     mitral: Valve = field(default_factory=lambda: Valve(6.0, 0.0, 27.0, 53.0, 1.5))
