@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from fractions import Fraction
 from pathlib import Path
 
 import numpy as np
@@ -76,9 +77,15 @@ def _channels(hea: Path, header: Header) -> tuple[list[Channel], list[str]]:
         spf = line.samples_per_frame
         start_s = -line.skew / header.frame_rate
         channels.append(
-            Channel(label, line.unit, header.frame_rate * spf, n_frames * spf, source, calibration_of(line), start_s, header=text)
+            Channel(label, line.unit, _rate(header, line), n_frames * spf, source, calibration_of(line), start_s, header=text)
         )
     return channels, notes
+
+
+def _rate(header: Header, line: SignalLine) -> float:
+    """Samples a second: 24,989 in a frame at 0.0025 Hz are 62.4725, where floats would give 62.472500000000004."""
+    exact = Fraction(header.frame_rate).limit_denominator(10**6)
+    return float((exact if float(exact) == header.frame_rate else Fraction(header.frame_rate)) * line.samples_per_frame)
 
 
 def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channel], list[str]]:
@@ -118,9 +125,8 @@ def _segmented(hea: Path, header: Header, files: set[Path]) -> tuple[list[Channe
 
 
 def _layout_channel(line: SignalLine, header: Header) -> Channel:
-    rate = header.frame_rate * line.samples_per_frame
     calibration = calibration_of(line if line.fmt in BITS else replace(line, fmt="16"))
-    return Channel(line.label, line.unit, rate, 0, lambda start, stop: np.zeros(stop - start, dtype=np.int16), calibration)
+    return Channel(line.label, line.unit, _rate(header, line), 0, lambda start, stop: np.zeros(stop - start, dtype=np.int16), calibration)
 
 
 def _spliced(

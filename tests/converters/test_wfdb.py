@@ -21,17 +21,34 @@ from caval_wfdb import write_marked
 from caval_wfdb.annotation import track_bytes
 from caval_wfdb.codec import decode, encode
 from caval_wfdb.detectors import xqrs
-from compliance import STEPS, FormatCompliance, one_line, record, same_annotations, track
+from compliance import STEPS, FormatCompliance, Seen, one_line, record, same_annotations, track
+
+
+def by_wfdb_package(path: Path) -> Seen:
+    name = str(path.with_suffix(""))
+    digital, physical = (wfdb.rdrecord(name, physical=p, smooth_frames=False) for p in (False, True))
+    notes = Track.empty()
+    if path.with_suffix(".atr").exists():
+        read = wfdb.rdann(name, "atr")
+        begun, onset, text, lasts = {}, [], [], []
+        for at, word in zip(read.sample / read.fs, read.aux_note, strict=True):
+            if word.endswith(" end"):
+                lasts[begun[word.removesuffix(" end")]] = at - onset[begun[word.removesuffix(" end")]]
+                continue
+            begun[word.removesuffix(" begin")] = len(onset)
+            onset.append(at)
+            text.append(word.removesuffix(" begin"))
+            lasts.append(0.0)
+        notes = Track.build(onset, text, duration_s=lasts)
+    values = {name: v for name, v in zip(physical.sig_name, physical.e_p_signal, strict=True)}
+    return Seen(values, notes, dict(zip(digital.sig_name, digital.e_d_signal, strict=True)), time_error_s=0.5 / 500)
 
 
 class TestWfdb(FormatCompliance):
     suffix = ".hea"
+    others = (by_wfdb_package,)
     samples_file = ".dat"
     time_step_s = 1 / 500
-
-    def second_reader(self, path: Path) -> dict[str, NDArray]:
-        read = wfdb.rdrecord(str(path.with_suffix("")), physical=False, smooth_frames=False)
-        return dict(zip(read.sig_name, read.e_d_signal, strict=True))
 
 
 def write(tmp_path: Path, recording: Recording, name: str = "rec") -> Path:

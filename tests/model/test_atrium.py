@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 
 from caval.errors import InputError
-from caval.model.atrium import Challenge, Interval, cutoff, effective_compliance, explain, height_of, wave_height
+from caval.model.atrium import Challenge, Interval, explain, height_of, wave_height
+from caval.model.compliance import cutoff, effective_compliance
 
 GRID = 0.01
 """Ends of ranges are found between points 0.3 and 0.4 % apart, heights in steps of 1/12 SD; 1 % is generous."""

@@ -7,23 +7,9 @@ import pytest
 from scipy.integrate import solve_ivp
 
 from caval.errors import InputError
-from caval.model.line import (
-    MMHG_PER_CM_BLOOD,
-    BloodSampling,
-    Clot,
-    Diathermy,
-    Disconnection,
-    Flush,
-    HeightStep,
-    Line,
-    Movement,
-    Zeroing,
-    fast_flush,
-    find_ring,
-    measure,
-    ring_response,
-    spoil_ecg,
-)
+from caval.model.events import BloodSampling, Clot, Diathermy, Disconnection, Flush, HeightStep, Movement, Zeroing, spoil_ecg
+from caval.model.line import MMHG_PER_CM_BLOOD, Line, measure
+from caval.model.ring import fast_flush, find_ring, ring_response
 from caval.recording import Calibration
 
 RATE = 500

@@ -4,7 +4,8 @@ import numpy as np
 import pytest
 
 import caval
-from caval.model.atrium import Interval, effective_compliance, explain, height_of
+from caval.model.atrium import Interval, explain, height_of
+from caval.model.compliance import effective_compliance
 from caval.model.simulate import Simulation, simulate
 
 QUIET = {"breathing.mode": "none", "line.noise_mmhg": 0.02}

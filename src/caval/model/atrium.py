@@ -24,8 +24,9 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from caval.errors import InputError
+from caval.model.compliance import cutoff, normal_quantile, short, span_text
 
-__all__ = ["Challenge", "Explanation", "Interval", "Ratio", "effective_compliance", "explain", "height_of", "wave_height"]
+__all__ = ["Challenge", "Explanation", "Interval", "explain", "height_of", "wave_height"]
 
 _Evidence = tuple[Callable[[NDArray[np.float64]], NDArray[np.float64]], str]
 
@@ -59,7 +60,7 @@ class Interval:
         """From a value and its standard deviation (standard error)."""
         if not sd >= 0:
             raise InputError(f"sd = {sd!r}: it must be 0 or more")
-        half = _normal_quantile(level) * sd
+        half = normal_quantile(level) * sd
         return cls(value - half, value + half, level)
 
     @property
@@ -70,7 +71,7 @@ class Interval:
     @property
     def sd(self) -> float:
         """Standard deviation of the normal reading."""
-        return (self.high - self.low) / (2 * _normal_quantile(self.level))
+        return (self.high - self.low) / (2 * normal_quantile(self.level))
 
     def minus(self, other: Interval) -> Interval:
         """The difference of two independent readings: ``after.minus(before)``."""
@@ -168,45 +169,6 @@ class Explanation:
         return self.deviance <= cutoff(level)
 
 
-@dataclass(frozen=True)
-class Ratio:
-    """A compliance from paired steps, ml/mmHg.
-
-    Attributes
-    ----------
-    value : float
-        The estimate.
-    low, high : float
-        Ends of the confidence interval. ``inf`` (or ``-inf``) where the pressure steps cannot be told from nothing.
-    level : float
-    steps : int
-    bounded : bool
-    statement : str
-    """
-
-    value: float
-    low: float
-    high: float
-    level: float
-    steps: int
-    bounded: bool
-    statement: str
-
-
-def cutoff(level: float) -> float:
-    """Rise of -2 log L at the edge of a profile interval: χ² quantile, one degree of freedom (3.84 at 0.95)."""
-    return _normal_quantile(level) ** 2
-
-
-def _normal_quantile(level: float) -> float:
-    from scipy.special import ndtri
-
-    return float(ndtri(0.5 + 0.5 * level))
-
-
-# ---------------------------------------------------------------------------------------------------------------- forward
-
-
 def wave_height(volume_ml: ArrayLike, compliance_ml_per_mmhg: ArrayLike, *, stiffening_per_ml: float = 0.0) -> NDArray[np.float64]:
     """Height of the wave that a volume makes, mmHg; arguments broadcast.
 
@@ -249,9 +211,6 @@ def height_of(heights_mmhg: ArrayLike, *, level: float = 0.95) -> Interval:
         raise InputError(f"heights of {len(heights)} beats; an interval needs two or more")
     half = float(stdtrit(len(heights) - 1, 0.5 + 0.5 * level)) * heights.std(ddof=1) / np.sqrt(len(heights))
     return Interval(float(heights.mean() - half), float(heights.mean() + half), level)
-
-
-# ---------------------------------------------------------------------------------------------------------------- backward
 
 
 def explain(
@@ -455,7 +414,7 @@ def _trace_ranges(
     height: Interval, volumes: tuple[float, float], compliances: tuple[float, float], k: float
 ) -> tuple[tuple[float, float], tuple[float, float]]:
     """Volumes and compliances that the height alone leaves of what is looked at, at 95 %."""
-    half = _width(height) * _normal_quantile(0.95)
+    half = _width(height) * normal_quantile(0.95)
     low, high = max(height.value - half, 1e-9), height.value + half
     return (
         (max(volumes[0], float(_volume_of(low, compliances[0], k))), min(volumes[1], float(_volume_of(high, compliances[1], k)))),
@@ -511,9 +470,9 @@ def _statement(
     asked: tuple[tuple[float, float], tuple[float, float]], stiffens: bool, *, adds: bool,
 ) -> str:
     what = f"{'an' if wave == 'a' else 'a'} {wave} wave of {_text(height)} mmHg"
-    pairs = f"volumes of {_to(*volume)} ml with compliances of {_to(*compliance)} ml/mmHg"
+    pairs = f"volumes of {span_text(*volume)} ml with compliances of {span_text(*compliance)} ml/mmHg"
     at_foot = ", compliance being that at the foot of the wave" if stiffens else ""
-    looked = f" (within the {_to(*asked[0])} ml and {_to(*asked[1])} ml/mmHg looked at{at_foot})"
+    looked = f" (within the {span_text(*asked[0])} ml and {span_text(*asked[1])} ml/mmHg looked at{at_foot})"
     if not known:
         return f"The trace alone does not say: {pairs} all explain {what}{looked}."
     given = "; ".join(known)
@@ -532,106 +491,5 @@ def _statement(
     return f"With {given}: {pairs} explain {what}; nothing known bounds {' or '.join(open_ends)}{looked}."
 
 
-def _to(low: float, high: float) -> str:
-    return f"{_short(low)} to {_short(high)}"
-
-
-def _short(value: float) -> str:
-    """Two significant figures, whole numbers from 10 on."""
-    return f"{value:.0f}" if abs(value) >= 10 else f"{value:.2g}"
-
-
 def _text(known: Interval) -> str:
-    return _short(known.low) if known.low == known.high else _to(known.low, known.high)
-
-
-# ---------------------------------------------------------------------------------------------------------------- compliance
-
-
-def effective_compliance(
-    volume_steps_ml: ArrayLike,
-    pressure_steps_mmhg: ArrayLike,
-    *,
-    planned_ml: ArrayLike | None = None,
-    volume_sd_ml: float | None = None,
-    pressure_sd_mmhg: float | None = None,
-    level: float = 0.95,
-) -> Ratio:
-    """Effective compliance from paired steps of volume and pressure.
-
-    Parameters
-    ----------
-    volume_steps_ml, pressure_steps_mmhg : array, shape (n,)
-        What was added (below 0: taken) at each step, as measured, and what the pressure did. Steps may differ in size.
-    planned_ml : array, shape (n,), optional
-        The sizes the steps were meant to have (``[50, 50, 100]``). Give it where the measured volumes are uncertain: they then count with
-        their own errors. Without it the volumes stand for their plan, and an error of a share e in them makes the compliance too large by
-        about e² (1 % for errors of 10 %).
-    volume_sd_ml, pressure_sd_mmhg : float, optional
-        Standard deviation of one reading of each. With both given they are taken as known, and one step is enough; without, the scatter of
-        two or more steps gives them.
-    level : float
-
-    Returns
-    -------
-    Ratio
-        Fieller's interval (J R Stat Soc B 1954;16:175, from memory), each step weighted by its planned size w: every C at which
-        ``Σ w (ΔV - C ΔP)`` cannot be told from 0. It is exact for normal errors of one size in all steps, in both volume and pressure, and
-        open when the pressure steps themselves cannot be told from none. The estimate is ``Σ wΔV / Σ wΔP``; with steps of one size, the
-        ratio of the sums.
-
-    Raises
-    ------
-    InputError
-        Arrays that are not of one length; too few steps; one of the standard deviations without the other.
-
-    Examples
-    --------
-    >>> effective_compliance([50, 50, 100], [2.1, 1.9, 4.0]).statement
-    'effective compliance 25 ml/mmHg, 95 % interval 23 to 27 ml/mmHg, from 3 steps'
-    """
-    from scipy.special import stdtrit
-
-    volume, pressure = np.asarray(volume_steps_ml, dtype=np.float64), np.asarray(pressure_steps_mmhg, dtype=np.float64)
-    plan = volume if planned_ml is None else np.asarray(planned_ml, dtype=np.float64)
-    alike = volume.ndim == 1 and volume.shape == pressure.shape == plan.shape
-    if not (alike and np.isfinite([volume, pressure, plan]).all() and plan.any()):
-        shapes = f"{volume.shape}, {pressure.shape} and {plan.shape}"
-        raise InputError(f"steps of volume, pressure and plan of shape {shapes}: finite values of one length, not all 0, are needed")
-    if (volume_sd_ml is None) != (pressure_sd_mmhg is None):
-        raise InputError("volume_sd_ml and pressure_sd_mmhg go together: give both or none")
-    n = len(volume)
-    weight = float(plan @ plan)
-    slopes = np.array([plan @ volume, plan @ pressure]) / weight  # measured per planned ml
-    if volume_sd_ml is not None and pressure_sd_mmhg is not None:
-        if not (volume_sd_ml >= 0 and pressure_sd_mmhg >= 0 and volume_sd_ml + pressure_sd_mmhg > 0):
-            raise InputError(f"volume_sd_ml = {volume_sd_ml!r}, pressure_sd_mmhg = {pressure_sd_mmhg!r}: 0 or more, and not both 0")
-        spread = np.diag([volume_sd_ml**2, pressure_sd_mmhg**2]) / weight
-        quantile = _normal_quantile(level)
-    else:
-        if n < 2:
-            raise InputError(f"{n} step: two or more are needed, or volume_sd_ml and pressure_sd_mmhg")
-        rest = np.stack([volume, pressure]) - slopes[:, None] * plan
-        spread = rest @ rest.T / (n - 1) / weight
-        quantile = float(stdtrit(n - 1, 0.5 + 0.5 * level))
-    return _fieller(slopes, spread, quantile, level, n)
-
-
-def _fieller(slopes: NDArray[np.float64], spread: NDArray[np.float64], quantile: float, level: float, n: int) -> Ratio:
-    """Every C with ``(v - C p)² ≤ q² (s_vv - 2 C s_vp + C² s_pp)``, a quadratic in C."""
-    v, p = float(slopes[0]), float(slopes[1])
-    a = p**2 - quantile**2 * spread[1, 1]
-    b = v * p - quantile**2 * spread[0, 1]
-    c = v**2 - quantile**2 * spread[0, 0]
-    root = float(np.sqrt(max(b**2 - a * c, 0.0)))
-    value = v / p if p else float("inf")
-    steps = f"from {n} step{'s' * (n > 1)}"
-    if a > 0:
-        low, high = (b - root) / a, (b + root) / a
-        words = f"effective compliance {_short(value)} ml/mmHg, {100 * level:g} % interval {_to(low, high)} ml/mmHg, {steps}"
-        return Ratio(value, low, high, level, n, True, words)
-    if c > 0 and a < 0:  # one root below 0 and one above: of what is left, only the ray from the latter is a compliance
-        low = (b - root) / a
-        words = f"the pressure steps cannot be told from none: {_short(low)} ml/mmHg or any greater compliance explains them, {steps}"
-        return Ratio(value, low, float("inf"), level, n, False, words)
-    return Ratio(value, -float("inf"), float("inf"), level, n, False, f"the steps do not say: any compliance explains them, {steps}")
+    return short(known.low) if known.low == known.high else span_text(known.low, known.high)

@@ -16,10 +16,11 @@ from typing import Any
 
 from caval.errors import InputError
 
-__all__ = ["PRESETS", "Chamber", "Circulation", "Heart", "Pericardium", "Valve", "Vessel", "preset"]
+__all__ = ["PRESETS", "Chamber", "Circulation", "Heart", "Pericardium", "Valve", "Vessel", "names", "preset", "source"]
 
 _HELDT = "Heldt 2002"
 _MYNARD = "Mynard 2012"
+_SAC = "Mynard & Smolich 2015"
 
 
 def _value(default: float, low: float, high: float, unit: str, source: str) -> Any:
@@ -65,9 +66,9 @@ class Valve:
 class Pericardium:
     """Pressure k·exp((V − v0)/φ) on the whole heart; V counts the blood in the four chambers, the muscle and the fluid."""
 
-    k_mmhg: float = _value(0.5, 0.0, 50.0, "mmHg", "Mynard & Smolich 2015")
-    v0_ml: float = _value(655.0, 50.0, 2000.0, "ml", "Mynard & Smolich 2015")
-    phi_ml: float = _value(40.0, 1.0, 500.0, "ml", "Mynard & Smolich 2015")
+    k_mmhg: float = _value(0.5, 0.0, 50.0, "mmHg", _SAC)
+    v0_ml: float = _value(655.0, 50.0, 2000.0, "ml", _SAC)
+    phi_ml: float = _value(40.0, 1.0, 500.0, "ml", _SAC)
     muscle_ml: float = _value(260.0, 0.0, 1000.0, "ml", "from memory")
     fluid_ml: float = _value(20.0, 0.0, 2000.0, "ml", "from memory; an effusion adds to it")
 
@@ -91,7 +92,7 @@ class Heart:
 class Circulation:
     """The closed loop. Build others with `with_values`."""
 
-    blood_volume_ml: float = _value(5300.0, 300.0, 12000.0, "ml", f"{_HELDT} has 5700; calibrated to a mean right-atrial pressure of 3")
+    blood_volume_ml: float = _value(5300.0, 300.0, 12000.0, "ml", _HELDT)
     ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.235, 0.40))
     rv: Chamber = field(default_factory=lambda: Chamber.of(23.0, 0.065, 0.51))
     la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.27, 0.44))
@@ -175,12 +176,29 @@ def _check_value(f: Field[Any], name: str, value: Any) -> None:
         raise InputError(f"{name} = {value!r}: allowed are {low:g} to {high:g} {unit}")
 
 
+_CHANGED = {
+    "blood_volume_ml": "5700; calibrated: mean right-atrial pressure of 3 with these ventricles",
+    "ra.e_rest": "0.30; calibrated: v of 4 to 5",
+    "ra.e_peak": "0.74; calibrated: a of 6",
+    "rv.v0_ml": "46; calibrated: end-systolic volume of 80 ml at a diastolic pressure that starts at 1",
+    "rv.e_rest": "0.05; calibrated: the rise of diastolic pressure from y to the end-diastolic 6",
+    "rv.e_peak": "1.3; calibrated: 25 mmHg with the lower unstressed volume",
+    "la.e_rest": "0.50; calibrated: v of 11",
+    "la.e_peak": "0.61; calibrated: a of 10",
+    "lv.v0_ml": "55; calibrated: end-systolic volume of 58 ml",
+    "lv.e_rest": "0.11; calibrated: left-atrial mean of 8 at an end-diastolic volume of 140 ml",
+    "lv.e_peak": "2.5; calibrated: 116/74 mmHg with the lower unstressed volume",
+    "pericardium.v0_ml": "641; calibrated: nearly slack at the healthy volume, so that y is not deeper than x",
+}
+"""What the healthy adult has otherwise than the base set: the base set's value, and why it was changed."""
+
 _CHILD_SIZE = 0.29
 """Blood of a child of 20 kg over the adult's."""
+_CHILD = "calibrated: a child's size; from memory"
 
 
-def _child() -> dict[str, float]:
-    """Volumes and compliances in proportion to size; resistances to a pressure of three quarters at six tenths of the flow (from memory)."""
+def _child() -> dict[str, tuple[float, str]]:
+    """Volumes and compliances in proportion to size; resistances to a pressure of four fifths at half the flow (from memory)."""
     adult = Circulation()
     values = {"blood_volume_ml": adult.blood_volume_ml * _CHILD_SIZE}
     for name in ("ra", "rv", "la", "lv"):
@@ -193,27 +211,105 @@ def _child() -> dict[str, float]:
         elif isinstance(part, Valve):
             values[f"{f.name}.a_max_cm2"] = part.a_max_cm2 * 0.45
         elif f.name.startswith("micro_"):
-            values[f.name] = part * 1.35
+            values[f.name] = part * 1.55
     values |= {f"pericardium.{n}_ml": getattr(adult.pericardium, f"{n}_ml") * _CHILD_SIZE for n in ("v0", "phi", "muscle", "fluid")}
-    return values | {"heart.leaflet_c": adult.heart.leaflet_c * _CHILD_SIZE, "heart.ventricle_peak_s": 0.27, "heart.atrium_length_s": 0.14}
+    values |= {"arteries.c": 0.55, "heart.leaflet_c": adult.heart.leaflet_c * _CHILD_SIZE}
+    values |= {"heart.ventricle_peak_s": 0.27, "heart.atrium_length_s": 0.14}
+    return {name: (value, _CHILD) for name, value in values.items()}
 
 
-PRESETS: dict[str, dict[str, float]] = {
+_FULL = "calibrated: the mean pressure that goes with it, blood kept back"
+_DILATED = "calibrated: ventricle that grew with the leak"
+
+_PRESETS: dict[str, dict[str, tuple[float, str]]] = {
     "healthy": {},
-    "hypovolaemia": {"blood_volume_ml": 4900.0},
-    "right_ventricular_failure": {"rv.e_peak": 0.35, "rv.e_rest": 0.09, "blood_volume_ml": 5900.0, "pulmonary_arteries.r": 0.14},
-    "acute_tricuspid_regurgitation": {"tricuspid.a_min_cm2": 0.75, "ra.e_rest": 0.9, "ra.e_peak": 1.3, "blood_volume_ml": 5500.0},
-    "chronic_tricuspid_regurgitation": {
-        "tricuspid.a_min_cm2": 0.6, "ra.e_rest": 0.05, "ra.e_peak": 0.10, "ra.v0_ml": 60.0, "pericardium.v0_ml": 900.0,
-        "blood_volume_ml": 5600.0,
+    "hypovolaemia": {"blood_volume_ml": (4750.0, "calibrated: a tenth of the blood lost")},
+    "right_ventricular_failure": {
+        "rv.e_peak": (0.26, "calibrated: half of the contractility"),
+        "rv.e_rest": (0.09, "calibrated: end-diastolic 12 to 15"),
+        "rv.v0_ml": (40.0, "calibrated: dilated"),
+        "pulmonary_arteries.r": (0.12, "calibrated: pulmonary mean of 20 at a normal output"),
+        "heart.annulus_share": (0.2, "calibrated: the ring moves little in a failing ventricle; shallow x"),
+        "blood_volume_ml": (6000.0, _FULL),
     },
-    "tricuspid_stenosis": {"tricuspid.a_max_cm2": 0.9, "ra.e_peak": 1.1, "blood_volume_ml": 5600.0},
-    "constriction": {"pericardium.k_mmhg": 4.0, "pericardium.v0_ml": 560.0, "pericardium.phi_ml": 22.0, "blood_volume_ml": 6000.0},
-    "tamponade": {"pericardium.fluid_ml": 220.0, "pericardium.k_mmhg": 1.0, "blood_volume_ml": 5800.0},
-    "restrictive": {"rv.e_rest": 0.10, "rv.stiffness": 0.012, "lv.e_rest": 0.15, "ra.e_peak": 1.0, "blood_volume_ml": 5800.0},
+    "acute_tricuspid_regurgitation": {
+        "tricuspid.a_min_cm2": (1.3, "calibrated: the regurgitant volume of the chronic preset, within 10 %"),
+        "ra.e_rest": (1.1, "calibrated: small stiff atrium, about 1 ml/mmHg; published values reach 0.79"),
+        "ra.e_peak": (1.3, "calibrated: stiff in diastole already, so a stays small"),
+        "heart.annulus_share": (0.1, "calibrated: no x"),
+        "blood_volume_ml": (5750.0, _FULL),
+    },
+    "chronic_tricuspid_regurgitation": {
+        "tricuspid.a_min_cm2": (0.75, "calibrated: a regurgitant volume of some 45 ml"),
+        "ra.e_rest": (0.05, "calibrated: large soft atrium, 20 ml/mmHg; published values go down to 0.042"),
+        "ra.e_peak": (0.065, "calibrated: weak"),
+        "ra.v0_ml": (60.0, "calibrated: large"),
+        "rv.v0_ml": (60.0, _DILATED),
+        "pericardium.v0_ml": (1000.0, "calibrated: grown with the heart"),
+        "heart.annulus_share": (0.3, "calibrated: x weakened by the dilated ring"),
+        "blood_volume_ml": (5900.0, _FULL),
+    },
+    "tricuspid_stenosis": {
+        "tricuspid.a_max_cm2": (1.0, "severe stenosis is at most 1 cm²; from memory"),
+        "ra.e_peak": (0.7, "calibrated: a hypertrophied atrium"),
+        "blood_volume_ml": (5600.0, _FULL),
+    },
+    "constriction": {
+        "pericardium.k_mmhg": (2.0, "calibrated: shell at work from early diastole on"),
+        "pericardium.v0_ml": (600.0, "calibrated: as k"),
+        "pericardium.phi_ml": (15.0, "calibrated: stiff shell; deep steep y, then a plateau"),
+        "ra.e_rest": (0.4, "calibrated: the atrial wall is in the shell too"),
+        "ra.e_peak": (0.6, "calibrated: as at rest"),
+        "heart.annulus_share": (0.12, "calibrated: adherent pericardium holds the ring; x shallower than y"),
+        "blood_volume_ml": (6200.0, _FULL),
+    },
+    "tamponade": {
+        "pericardium.fluid_ml": (350.0, "calibrated: the atrium's transmural pressure stays low"),
+        "pericardium.k_mmhg": (4.0, "calibrated: pericardial 8 to 14 mmHg throughout"),
+        "pericardium.v0_ml": (700.0, "calibrated: as k"),
+        "pericardium.phi_ml": (100.0, "calibrated: fluid couples the chambers without a hard stop"),
+        "blood_volume_ml": (6300.0, _FULL),
+    },
+    "restrictive": {
+        "rv.e_rest": (0.08, "calibrated: steep y"),
+        "rv.stiffness": (0.012, "calibrated: stiffens as it fills; dip and plateau"),
+        "lv.e_rest": (0.15, "calibrated: left-atrial mean above 10"),
+        "ra.e_peak": (0.7, "calibrated: tall a"),
+        "blood_volume_ml": (5900.0, _FULL),
+    },
     "child": _child(),
 }
-"""Changes from the healthy adult, by name."""
+
+PRESETS: dict[str, dict[str, float]] = {name: {key: value for key, (value, _) in table.items()} for name, table in _PRESETS.items()}
+"""Changes from the healthy adult, by name. `source` says where each comes from."""
+
+
+def source(name: str, circulation: str = "healthy") -> str:
+    """Where the value of a parameter comes from, in the circulation of that name.
+
+    Raises
+    ------
+    InputError
+        No such parameter or circulation.
+
+    Examples
+    --------
+    >>> source("svc.c")
+    'Heldt 2002'
+    >>> source("ra.e_rest")
+    'Heldt 2002 has 0.30; calibrated: v of 4 to 5'
+    >>> source("tricuspid.a_max_cm2", "tricuspid_stenosis")
+    'severe stenosis is at most 1 cm²; from memory'
+    """
+    parameters = preset(circulation)
+    if name not in names(parameters):
+        raise InputError(f"no parameter {name!r} in a circulation; it has: {', '.join(names(parameters))}")
+    if name in _PRESETS[circulation]:
+        return _PRESETS[circulation][name][1]
+    head, _, tail = name.partition(".")
+    known = {f.name: f for f in fields(getattr(parameters, head) if tail else parameters)}
+    base = str(known[tail or head].metadata["source"])
+    return f"{base} has {_CHANGED[name]}" if name in _CHANGED else base
 
 
 def preset(name: str) -> Circulation:

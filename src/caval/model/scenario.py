@@ -34,22 +34,23 @@ from pathlib import Path
 from typing import Any
 
 from caval.errors import FileError, InputError
-from caval.model import line as lines
+from caval.model import events as happenings
 from caval.model.circulation import Breathing, Infusion
-from caval.model.line import Event, Line
+from caval.model.events import Event
+from caval.model.line import Line
 from caval.model.parameters import Circulation, preset
 
 __all__ = ["EVENTS", "Scenario", "load_scenario", "scenario_names"]
 
 EVENTS: dict[str, type[Event]] = {
-    "flush": lines.Flush,
-    "zeroing": lines.Zeroing,
-    "sampling": lines.BloodSampling,
-    "disconnection": lines.Disconnection,
-    "clot": lines.Clot,
-    "height_step": lines.HeightStep,
-    "movement": lines.Movement,
-    "diathermy": lines.Diathermy,
+    "flush": happenings.Flush,
+    "zeroing": happenings.Zeroing,
+    "sampling": happenings.BloodSampling,
+    "disconnection": happenings.Disconnection,
+    "clot": happenings.Clot,
+    "height_step": happenings.HeightStep,
+    "movement": happenings.Movement,
+    "diathermy": happenings.Diathermy,
 }
 """Events by the kind that a scenario calls them."""
 

@@ -15,7 +15,8 @@ from caval import registry
 from caval._files import write_all
 from caval.model.circulation import Haemodynamics, run
 from caval.model.ecg import ecg
-from caval.model.line import Diathermy, Line, measure, spoil_ecg
+from caval.model.events import Diathermy, spoil_ecg
+from caval.model.line import Line, measure
 from caval.model.rhythm import Rhythm, schedule
 from caval.model.scenario import Scenario, load_scenario
 from caval.model.truth import beat_truth, wave_truth

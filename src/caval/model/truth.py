@@ -16,6 +16,8 @@ from scipy import signal
 from caval.model.circulation import Haemodynamics
 from caval.model.rhythm import Rhythm
 from caval.stages._signal import refine
+from caval.tables import overlaps
+from caval.vocabulary import SPANS
 
 __all__ = ["beat_truth", "wave_truth"]
 
@@ -24,6 +26,8 @@ Floats = NDArray[np.float64]
 _PROMINENCE_WINDOW_S = 0.6
 _LEAST_MMHG = 0.02
 """An extremum lower than this is none: the integrator's own ripple is a hundred times smaller."""
+_SHUT = 0.1
+"""Opening of the tricuspid valve, 0 to 1, below which an atrial contraction meets a shut one."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -46,7 +50,9 @@ class _Extrema:
         return np.array([a + int(np.argmax(self.height[a:b])) if b > a else -1 for a, b in zip(first, last, strict=True)], dtype=np.int64)
 
 
-def wave_truth(trace: Floats, rate: float, delay_s: float, rhythm: Rhythm, heart: Haemodynamics) -> pd.DataFrame:
+def wave_truth(
+    trace: Floats, rate: float, delay_s: float, rhythm: Rhythm, heart: Haemodynamics, *, spans: pd.DataFrame | None = None
+) -> pd.DataFrame:
     """Marks of a noise-free trace.
 
     Parameters
@@ -57,12 +63,16 @@ def wave_truth(trace: Floats, rate: float, delay_s: float, rhythm: Rhythm, heart
         Delay of slow waves through the line.
     rhythm, heart
         What drove it, on the clock of the vessel.
+    spans : DataFrame, optional
+        ``onset_s, duration_s, kind, …``: what happened to this trace, on the recorded clock. Inside a span that carries no marks
+        (`caval.vocabulary.SPANS`) no wave has a place.
 
     Returns
     -------
     DataFrame
-        ``time_s, mark, beat, pressure_mmhg, prominence_mmhg, state, detail``: state ``clear``, or ``fused`` with NaN for what has no
-        extremum. `beat` counts the R times from 0; an a belongs to the R that follows it. `detail` is ``cannon`` for an a on a shut valve.
+        ``time_s, mark, beat, pressure_mmhg, prominence_mmhg, state, detail``: state ``clear``; ``fused``, with NaN, for what has no
+        extremum; ``unusable``, with NaN, for what stands, or would be looked for, inside a span. `beat` counts the R times from 0; an a
+        belongs to the R that follows it. `detail` is ``cannon`` for an a on a shut tricuspid valve.
     """
     peaks, troughs = (_Extrema.of(trace, rate, sign) for sign in (1.0, -1.0))
     r = rhythm.r_times_s
@@ -76,13 +86,28 @@ def wave_truth(trace: Floats, rate: float, delay_s: float, rhythm: Rhythm, heart
     c_time = _time(peaks, c)
     x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), r_seen, v_time))
     y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, p_next + 0.10), following + delay_s + 0.02))
-    rows = [_rows("v", v, peaks, r, 1.0), _rows("x", x, troughs, r, -1.0), _rows("y", y, troughs, r, -1.0)]
-    a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, c)
+    rows = [
+        _rows("v", v, peaks, r, 1.0, opens), _rows("x", x, troughs, r, -1.0, r_seen + 0.22), _rows("y", y, troughs, r, -1.0, opens + 0.08),
+    ]
+    a_rows, taken = _atrial(peaks, rhythm, delay_s, heart, c)
     c = np.where(np.isin(c, taken), -1, c)  # one peak cannot be both: the atrium's is its own
-    rows += [_rows("c", c, peaks, r, 1.0), a_rows]
+    rows += [_rows("c", c, peaks, r, 1.0, r_seen + 0.08), a_rows]
     marks = pd.concat(rows, ignore_index=True)
     inside = marks["time_s"].isna() | marks["time_s"].between(0, len(trace) / rate)
-    return marks[inside].sort_values(["beat", "time_s"], kind="stable", ignore_index=True)
+    if spans is not None:
+        marks = _without(marks, spans)
+    return marks[inside].drop(columns="expected_s").sort_values(["beat", "time_s"], kind="stable", ignore_index=True)
+
+
+def _without(marks: pd.DataFrame, spans: pd.DataFrame) -> pd.DataFrame:
+    """The marks, those inside an unusable span without a place."""
+    bad = spans[[kind not in SPANS or SPANS[kind].unusable for kind in spans["kind"]]]
+    place = marks["time_s"].fillna(marks["expected_s"]).to_numpy(float)
+    hit = overlaps(place, place, bad) >= 0
+    return marks.assign(
+        state=np.where(hit, "unusable", marks["state"]),
+        **{name: np.where(hit, np.nan, marks[name].to_numpy(float)) for name in ("time_s", "pressure_mmhg", "prominence_mmhg")},
+    )
 
 
 def _opening(r: Floats, following: Floats, heart: Haemodynamics) -> Floats:
@@ -103,7 +128,7 @@ def _time(extrema: _Extrema, index: NDArray[np.int64]) -> Floats:
     return np.append(extrema.time, np.nan)[index]
 
 
-def _rows(mark: str, index: NDArray[np.int64], extrema: _Extrema, r: Floats, sign: float) -> pd.DataFrame:
+def _rows(mark: str, index: NDArray[np.int64], extrema: _Extrema, r: Floats, sign: float, expected_s: Floats) -> pd.DataFrame:
     blank = np.nan
     return pd.DataFrame(
         {
@@ -114,24 +139,25 @@ def _rows(mark: str, index: NDArray[np.int64], extrema: _Extrema, r: Floats, sig
             "prominence_mmhg": np.append(extrema.prominence, blank)[index],
             "state": np.where(index >= 0, "clear", "fused"),
             "detail": "",
+            "expected_s": expected_s,
         }
     )
 
 
 def _atrial(
-    peaks: _Extrema, rhythm: Rhythm, delay_s: float, opening: Floats, c: NDArray[np.int64]
+    peaks: _Extrema, rhythm: Rhythm, delay_s: float, heart: Haemodynamics, c: NDArray[np.int64]
 ) -> tuple[pd.DataFrame, NDArray[np.int64]]:
     """The a of every P that has an R after it, and the peaks they stand on."""
     r, p = rhythm.r_times_s, rhythm.p_times_s
     beat = np.searchsorted(r, p)
     p, beat = p[beat < len(r)], beat[beat < len(r)]
     index = peaks.highest(p + delay_s + 0.05, p + delay_s + 0.20)
-    before = np.maximum(beat - 1, 0)
-    contraction = p + 0.12
-    shut = ((contraction > r[before] + 0.03) & (contraction < opening[before]) & (beat > 0)) | (contraction > r[beat] + 0.03)
+    top = np.where(index >= 0, _time(peaks, index) - delay_s, p + 0.11)  # of the contraction, on the clock of the vessel
+    valve = heart.openings["tricuspid"]
+    shut = valve[np.clip(np.rint(top * heart.rate).astype(np.int64), 0, len(valve) - 1)] < _SHUT
     shared = (index >= 0) & np.isin(index, c) & ~shut
     index = np.where(shared & (np.append(peaks.time, np.nan)[index] > p + delay_s + 0.16), -1, index)
-    rows = _rows("a", index, peaks, p, 1.0)
+    rows = _rows("a", index, peaks, p, 1.0, p + delay_s + 0.09)
     rows["beat"] = beat
     rows["detail"] = np.where(shut, "cannon", "")
     return rows, index[index >= 0]

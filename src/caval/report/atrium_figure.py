@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from caval.model.atrium import Explanation, cutoff, wave_height
+from caval.model.atrium import Explanation, wave_height
+from caval.model.compliance import cutoff
 from caval.report import _ink
 from caval.report.figure import FOOTER
 from caval.vocabulary import WAVES
