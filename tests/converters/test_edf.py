@@ -9,7 +9,6 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from numpy.typing import NDArray
 
 import caval
 from caval.errors import FileError, InputError
@@ -311,6 +310,20 @@ def _discontinuous(tmp_path: Path, second_start: float = 6.4, name: str = "gap.e
         raw[end - width : end] = (new + held[len(old) :]).ljust(width, b"\0")[:width]
     path.write_bytes(bytes(raw))
     return path
+
+
+@pytest.mark.parametrize("late_s", [1e-9, 0.001, 0.004, 0.012, 0.02, 0.5, 1 / 3])
+def test_2_2_4_a_gap_of_part_of_a_sample_loses_none(tmp_path: Path, late_s: float) -> None:
+    """Half a sample at 125 Hz is 4 ms: rounding each data record on its own would put two samples in one place."""
+    for name in ("odd", "even"):
+        start = 3.0 + late_s + (1.0 if name == "odd" else 0.0)
+        got = caval.read(_discontinuous(tmp_path, start, f"{name}.edf"))
+        for channel in got.channels:
+            sent = record().channel(channel.label).digital()
+            kept = np.delete(channel.digital(), [i for low, high in channel.gaps for i in range(low, high)])
+            np.testing.assert_array_equal(kept, sent, err_msg=channel.label)
+            at = (channel.n_samples - round(5 * channel.sampling_rate)) / channel.sampling_rate
+            assert abs(at - start) <= 0.5 / channel.sampling_rate + 1e-6
 
 
 def test_2_2_4_records_that_overlap_are_refused(tmp_path: Path) -> None:

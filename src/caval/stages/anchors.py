@@ -21,30 +21,27 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._signal import Thin, bandpass, cut, fill, grid, lowpass, moving_mean
-from caval.stages.detect import QRS_BAND_HZ
+from caval.stages._evidence import GRID_S, Evidence, ecg_evidence, no_evidence
+from caval.stages._sequence import best_sequence
+from caval.stages._signal import cut, fill, lowpass
 
 __all__ = ["anchors"]
 
 Floats = NDArray[np.float64]
 
-_GRID_S = 60.0
 _SAME_S = 0.09
 """Events of two ECG detectors this close are one candidate."""
 _DOUBT = -0.5
 """Weight below which an ECG event is no explanation of an upstroke."""
 _DICROTIC_S = 0.42
 """A weak upstroke this soon after a strong one is its dicrotic wave: ejection takes 0.25 to 0.35 s (common practice)."""
-_SILENCE_S = 5.0
-_HALF_PICTURE_S = 0.06
-_REFRACTORY_S = 0.25
 _REACH_S = 0.10
 """How far an upstroke may lie from R plus the transit time and still belong to it; a weak one may come as much later again."""
 _WEAK = 0.35
 """Share of the usual upstroke's slope below which an upstroke is weak: a premature beat's, or a dicrotic wave."""
 
 
-@stage(name="anchors", gives=("beats",), margin_s=2 * _GRID_S)
+@stage(name="anchors", gives=("beats",), margin_s=2 * GRID_S)
 def anchors(
     candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, *, transit_s: float = 0.20
 ) -> pd.DataFrame:
@@ -76,9 +73,9 @@ def anchors(
         return tables.empty("beats")
     strength = _strength(abp, feet) if abp is not None else np.empty(0)
     feet, strength = _without_dicrotic(feet, strength)
-    evidence = _ecg_evidence(ecg, events, feet[strength > _WEAK], transit_s) if ecg is not None and len(events) else _no_evidence(transit_s)
+    evidence = ecg_evidence(ecg, events, feet[strength > _WEAK], transit_s) if ecg is not None and len(events) else no_evidence(transit_s)
     pool = _pool(events, votes, feet, strength, evidence)
-    chosen = _best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
+    chosen = best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
     return pd.DataFrame(
         {
             "beat": np.arange(len(chosen)),
@@ -89,24 +86,6 @@ def anchors(
             "confidence": 1.0 / (1.0 + np.exp(-1.5 * pool.weight[chosen])),
         }
     )
-
-
-@dataclass(frozen=True, eq=False)
-class _Evidence:
-    """What the ECG says of each event, and the transit times learned from both.
-
-    `size` is the event's energy over the usual QRS's, `likeness` the correlation with the minute's QRS, `quiet` runs from 0 (the ECG
-    around is as loud as a QRS) to 1. `quiet_at_s`/`quiet_level` give it over time. Transit and its spread are per grid minute.
-    """
-
-    size: Floats
-    likeness: Floats
-    quiet: Floats
-    quiet_at_s: Floats
-    quiet_level: Floats
-    minute_s: Floats
-    transit_s: Floats
-    spread_s: Floats
 
 
 @dataclass(frozen=True, eq=False)
@@ -145,92 +124,6 @@ def _nearest(sorted_times: Floats, query: Floats) -> NDArray[np.int64]:
     return np.where(np.abs(sorted_times[right] - query) < np.abs(query - sorted_times[left]), right, left)
 
 
-def _no_evidence(transit_s: float) -> _Evidence:
-    none = np.empty(0)
-    return _Evidence(none, none, none, np.array([0.0]), np.array([0.0]), np.array([0.0]), np.array([transit_s]), np.array([0.03]))
-
-
-def _ecg_evidence(ecg: Signal, events: Floats, feet: Floats, transit_s: float) -> _Evidence:
-    """Size, likeness and quiet of each event, with the picture, the size and the transit time of its minute."""
-    values, missing = fill(ecg.values)
-    rate = ecg.sampling_rate
-    band = bandpass(values - np.median(values), rate, *QRS_BAND_HZ)
-    energy = np.sqrt(np.maximum(moving_mean(band**2, round(0.09 * rate)), 0.0))  # its running sum may end a rounding below 0
-    place = np.clip(np.rint(ecg.position(events)).astype(int), 0, len(values) - 1)
-    loudness = ndimage.maximum_filter1d(energy, round(0.08 * rate) | 1)[place]
-    thin = Thin.of(ecg, 0.04)
-    background = ndimage.percentile_filter(thin.take(energy), 45, size=round(1.6 * rate / thin.step) | 1)
-    background_at_s = thin.time_s(ecg)
-    half = round(_HALF_PICTURE_S * rate)
-    shapes = cut(band, place - half, 2 * half + 1)
-    norms = np.sqrt((shapes**2).sum(axis=1)) + 1e-12
-
-    size, likeness = np.zeros(len(events)), np.zeros(len(events))
-    minutes, transits, spreads, usual_at = [], [], [], []
-    transit, spread, usual = transit_s, 0.03, float(np.median(loudness))
-    for start_s, stop_s in grid(events[0], events[-1] + 1e-9, _GRID_S):
-        near = (events >= start_s - _GRID_S) & (events < stop_s + _GRID_S)
-        here = (events >= start_s) & (events < stop_s)
-        if near.any():
-            usual, picture, transit, spread = _learn(events[near], loudness[near], shapes[near], norms[near], feet, transit, spread)
-            size[here] = loudness[here] / max(usual, 1e-12)
-            likeness[here] = shapes[here] @ picture / norms[here]
-        minutes.append((start_s + stop_s) / 2)
-        transits.append(transit)
-        spreads.append(spread)
-        usual_at.append(usual)
-    usual_then = np.interp(background_at_s, minutes, usual_at)
-    ratio = background / np.maximum(usual_then, 1e-12)
-    quiet_level = np.clip((0.45 - ratio) / 0.30, 0.0, 1.0)
-    width = round(0.5 * rate) | 1
-    swing = thin.take(ndimage.maximum_filter1d(values, width) - ndimage.minimum_filter1d(values, width))
-    loudest = ndimage.maximum_filter1d(thin.take(energy), round(_SILENCE_S * rate / thin.step) | 1)
-    quiet_level[(loudest < 0.3 * usual_then) | (swing < 0.01 * usual_then)] = 0.0  # a lead that shows nothing says nothing
-    quiet_level[thin.take(missing)] = 0.0
-    quiet = thin.spread(quiet_level)[place]
-    return _Evidence(size, likeness, quiet, background_at_s, quiet_level, np.array(minutes), np.array(transits), np.array(spreads))
-
-
-def _learn(
-    events: Floats, loudness: Floats, shapes: Floats, norms: Floats, feet: Floats, transit: float, spread: float
-) -> tuple[float, Floats, float, float]:
-    """QRS size, QRS picture (unit norm), transit time and its spread from the events and upstrokes of three minutes.
-
-    The beats that teach are the events an upstroke follows; without an artery, the loudest of their neighbourhood.
-    """
-    window_feet = feet[(feet > events[0]) & (feet < events[-1] + 0.5)]
-    teach = _followed(events, loudness, window_feet)
-    if teach.sum() < 5:
-        top = np.array([loudness[np.abs(events - t) < 1.2].max() for t in events])
-        teach = loudness > 0.7 * np.minimum(top, np.median(top) * 1.5)
-    usual = float(np.median(loudness[teach]))
-    fair = teach & (loudness > 0.4 * usual) & (loudness < 2.5 * usual)
-    unit = shapes[fair] / norms[fair, None] if fair.any() else shapes / norms[:, None]
-    picture = np.median(unit, axis=0)
-    alike = unit @ picture > 0.5 * np.linalg.norm(picture)
-    if alike.sum() >= 3:
-        picture = np.median(unit[alike], axis=0)
-    picture = picture / (np.linalg.norm(picture) + 1e-12)
-    good = fair & (shapes @ picture / norms > 0.8)
-    if good.sum() >= 8 and len(window_feet) >= 8:
-        after = window_feet[np.clip(np.searchsorted(window_feet, events[good] + 0.05), 0, len(window_feet) - 1)] - events[good]
-        after = after[(after > 0.05) & (after < 0.45)]
-        if len(after) >= 8:
-            transit = float(np.median(after))
-            spread = float(np.clip(1.4826 * np.median(np.abs(after - transit)), 0.004, 0.04))
-    return usual, picture, transit, spread
-
-
-def _followed(events: Floats, loudness: Floats, feet: Floats) -> NDArray[np.bool_]:
-    """Which event is the loudest of those 0.05 to 0.45 s before an upstroke."""
-    teach = np.zeros(len(events), dtype=bool)
-    first, last = np.searchsorted(events, feet - 0.45), np.searchsorted(events, feet - 0.05)
-    for low, high in zip(first, last, strict=True):
-        if high > low:
-            teach[low + int(np.argmax(loudness[low:high]))] = True
-    return teach
-
-
 def _strength(abp: Signal, feet: Floats) -> Floats:
     """Steepest slope of each upstroke over the usual one around it (the running median of the strong ones), shape (n,)."""
     if not len(feet):
@@ -255,7 +148,7 @@ def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
     return feet[keep], strength[keep]
 
 
-def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: _Evidence) -> _Pool:
+def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: Evidence) -> _Pool:
     """Every candidate with its weight: ECG events, and upstrokes that no likely ECG event explains, set back by the transit time."""
     transit = np.interp(feet, evidence.minute_s, evidence.transit_s)
     expected = feet - transit
@@ -283,7 +176,7 @@ def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidenc
     return _Pool(time[order], weight[order], source[order], sd[order])
 
 
-def _ecg_weight(votes: Floats, evidence: _Evidence) -> Floats:
+def _ecg_weight(votes: Floats, evidence: Evidence) -> Floats:
     """Log-odds of a QRS from the ECG alone: in quiet, size decides and any shape will do; in noise only the minute's shape counts."""
     big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -6.0, -3.0)
     alike = np.clip(evidence.likeness, 0.0, 1.0) ** 3 * _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
@@ -326,38 +219,3 @@ def _usual_interval(pool: _Pool) -> Floats:
     gaps = np.diff(likely)
     usual = ndimage.median_filter(np.clip(gaps, 0.25, 2.5), size=min(15, len(gaps)), mode="nearest")
     return np.interp(pool.time_s, likely[1:], usual)
-
-
-def _best_sequence(time: Floats, weight: Floats, usual: Floats) -> NDArray[np.int64]:
-    """Indices of the candidates whose weights and intervals add up to the most.
-
-    An interval near the usual one adds up to 0.8, one much shorter takes away; none is shorter than the refractory time.
-    """
-    total, back = np.array(weight, dtype=float), np.full(len(time), -1)
-    best_so_far = -np.inf
-    first = np.searchsorted(time, time - 2.2 * usual)
-    last = np.searchsorted(time, time - _REFRACTORY_S, side="right")
-    running = np.full(len(time) + 1, -np.inf)  # running[k]: the best total among candidates before k
-    running_at = np.full(len(time) + 1, -1)
-    for i in range(len(time)):
-        low, high = first[i], last[i]
-        best, link = max(0.0, running[low]), (running_at[low] if running[low] > 0 else -1)
-        if high > low:
-            share = (time[i] - time[low:high]) / usual[i]
-            gain = 0.8 * np.exp(-0.5 * ((share - 1.0) / 0.10) ** 2) - 3.0 * np.clip(0.6 - share, 0.0, None)
-            linked = total[low:high] + gain
-            k = int(np.argmax(linked))
-            if linked[k] > best:
-                best, link = float(linked[k]), low + k
-        total[i] = weight[i] + best
-        back[i] = link
-        better = total[i] > best_so_far
-        best_so_far = max(best_so_far, total[i])
-        running[i + 1] = best_so_far
-        running_at[i + 1] = i if better else running_at[i]
-    chosen = []
-    i = int(np.argmax(total)) if len(total) and total.max() > 0 else -1
-    while i >= 0:
-        chosen.append(i)
-        i = back[i]
-    return np.array(chosen[::-1], dtype=np.int64)
