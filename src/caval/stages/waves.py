@@ -28,8 +28,6 @@ Floats = NDArray[np.float64]
 
 _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.070}
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
-_WEIGHTS = {"x": (1.0, 2.5)}
-"""How much standing out and height count (1.5 and 1.2 otherwise): x is the deepest point of systole, whatever stands out beside it."""
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
 _PROMINENCE_WINDOW_S = 0.5
@@ -165,8 +163,7 @@ class _Found:
         inside &= time <= np.where(sought, high, -np.inf)[:, None]
         off = (time - place[:, None]) / reach
         stands = np.minimum(prominence / (0.3 * self.span[:, None]), 1.0)
-        stands_for, height_for = _WEIGHTS.get(wave, (1.5, 1.2))
-        score = np.where(inside, stands_for * stands + height_for * height / self.span[:, None] - 0.5 * off**2, -np.inf)
+        score = np.where(inside, stands + 2.5 * height / self.span[:, None] - 0.5 * off**2, -np.inf)
         best = score.argmax(axis=1)
         rows = np.arange(len(best))
         hit = inside[rows, best]
