@@ -4,8 +4,7 @@ A test module of a format makes a class of it::
 
     class TestEdf(FormatCompliance):
         suffix = ".edf"
-
-    others = (by_pyedflib, by_edfio)
+        others = (by_pyedflib, by_edfio)
 
 and names the format's resolution and unrelated readers. What is written here is read back by ours and by each of those.
 """
@@ -87,6 +86,10 @@ class Seen:
 class FormatCompliance:
     suffix: str
     others: tuple[Callable[[Path], Seen], ...]
+    texts: tuple[str, ...] = ("Blutdruck fällt", "5 cmH₂O PEEP", "µV", "ciśnienie", "中心静脉压")
+    """Annotation texts outside ASCII that the format keeps."""
+    refused_texts: tuple[str, ...] = ()
+    """Those that it cannot hold so that every reader sees them."""
     time_step_s: float
     """What the format rounds annotation times to: half of it is the error allowed, a whole one at 0 s."""
     samples_file: str = ""
@@ -179,9 +182,18 @@ class FormatCompliance:
         same_annotations(got.annotations, track(), self.time_step_s + 1e-9)
 
     def test_annotation_text_outside_ascii(self, path: Path) -> None:
-        sent = Track.build([1.0, 2.0, 3.0, 4.0], ["Blutdruck fällt", "5 cmH₂O PEEP", "µV", "中心静脉压"])
-        got = self.trip(record().with_track("annotations", sent), path)
-        assert list(got.annotations.text) == list(sent.text)
+        sent = Track.build(np.arange(1.0, 1.0 + len(self.texts)), self.texts)
+        got = self.trip(record(start_time=None).with_track("annotations", sent), path)
+        assert list(got.annotations.text) == list(self.texts)
+        for other in self.others:
+            assert list(other(path).annotations.text) == list(self.texts), other.__name__
+
+    def test_annotation_text_that_the_format_cannot_hold_is_refused(self, path: Path) -> None:
+        for text in self.refused_texts:
+            with pytest.raises(InputError) as error:
+                caval.write(record().with_track("annotations", Track.build([1.0], [text])), path)
+            assert repr(text) in one_line(error)
+            assert not list(path.parent.iterdir())
 
     def test_many_annotations_in_little_time_are_all_kept(self, path: Path) -> None:
         onset = np.concatenate([np.linspace(0.1, 0.3, 700), np.linspace(0.4, 7.9, 300)])
@@ -260,6 +272,19 @@ class FormatCompliance:
         for a, b in zip(sent.channels, got.channels, strict=True):
             np.testing.assert_array_equal(b.digital(), values)
             np.testing.assert_allclose(b.physical(), a.physical(), rtol=0, atol=1e-3 * abs(a.calibration.scale))
+
+    def test_calibrations_of_every_kind(self, path: Path) -> None:
+        """Any stored range, scale and offset whose limits fit eight characters, upright and inverted."""
+        rng = np.random.default_rng(4)
+        for number in range(25):
+            low, high = np.sort(rng.choice(np.arange(-32767, 32768), 2, replace=False)).tolist()
+            first, last = rng.normal(0, 10.0 ** rng.integers(0, 4), 2).round(2).tolist()
+            limits = Calibration(low, high, first, last)
+            codes = rng.integers(low, high + 1, 100).astype(np.int16)
+            sent = Recording.from_arrays({"P": (codes, 50.0, "mmHg")}, name="rec", calibrations={"P": limits})
+            channel = self.trip(sent, path.with_name(f"r{number}{self.suffix}")).channels[0]
+            np.testing.assert_array_equal(channel.digital(), codes)
+            np.testing.assert_allclose(channel.physical(), limits.to_physical(codes), rtol=0, atol=1e-3 * abs(limits.scale))
 
     def test_a_second_trip_changes_nothing_more(self, path: Path, tmp_path: Path) -> None:
         sent = record().with_track("annotations", track())

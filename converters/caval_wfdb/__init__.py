@@ -6,7 +6,8 @@ from pathlib import Path
 
 from caval.registry import Format
 from caval_wfdb.annotation import read_annotations
-from caval_wfdb.read import header_path, is_annotation_ending, read_wfdb
+from caval_wfdb.header import is_annotation_ending
+from caval_wfdb.read import header_path, read_wfdb
 from caval_wfdb.write import write_marked, write_wfdb
 
 __all__ = ["FORMAT", "read_annotations", "read_wfdb", "write_marked", "write_wfdb"]

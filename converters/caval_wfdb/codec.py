@@ -33,7 +33,12 @@ def decode(raw: bytes, name: str) -> tuple[dict[str, NDArray], float | None]:
     """
     if len(raw) % 2 or len(raw) < 2:
         raise FileError(f"{name} is no annotation file, or truncated: {len(raw)} bytes")
-    words = np.frombuffer(raw, dtype="<u2").tolist()
+    rows = _parsed(raw, np.frombuffer(raw, dtype="<u2").tolist(), name)
+    return _without_definitions({key: np.array(rows[key], dtype=object if key == "text" else np.int64) for key in rows})
+
+
+def _parsed(raw: bytes, words: list[int], name: str) -> dict[str, list]:
+    """The columns of `decode` as lists, the notes about the file itself among them."""
     ticks: list[int] = []
     codes: list[int] = []
     subtypes: list[int] = []
@@ -84,11 +89,7 @@ def decode(raw: bytes, name: str) -> tuple[dict[str, NDArray], float | None]:
             chans.append(chan)
             nums.append(num)
             texts.append("")
-    columns = {
-        "tick": np.array(ticks, dtype=np.int64), "code": np.array(codes, dtype=np.int64), "subtype": np.array(subtypes, dtype=np.int64),
-        "chan": np.array(chans, dtype=np.int64), "num": np.array(nums, dtype=np.int64), "text": np.array(texts, dtype=object),
-    }
-    return _without_definitions(columns)
+    return {"tick": ticks, "code": codes, "subtype": subtypes, "chan": chans, "num": nums, "text": texts}
 
 
 def _decoded(raw: bytes) -> str:
@@ -119,7 +120,7 @@ def encode(columns: dict[str, NDArray], ticks_per_s: float) -> bytes:
     Raises
     ------
     InputError
-        Ticks out of order, a text above 255 bytes, a chan, num or subtype out of range.
+        Ticks out of order, a text above 255 bytes or beyond Latin-1, a chan, num or subtype out of range.
     """
     tick = columns["tick"].astype(np.int64)
     step = np.diff(tick, prepend=0)
@@ -161,15 +162,12 @@ def _checked(values: NDArray, low: int, high: int, what: str) -> NDArray[np.int6
 
 
 def _text_words(text: str) -> NDArray[np.uint16]:
-    """A text field as 16-bit words, none for no text.
-
-    Latin-1, which other readers expect; UTF-8 where that cannot hold it, or would be read back as something else.
-    """
+    """A text field as 16-bit words, none for no text: Latin-1, which is what other readers take it for."""
     if not text:
         return np.empty(0, dtype="<u2")
     raw = text.encode("latin-1", "replace")
     if _decoded(raw) != text:
-        raw = text.encode("utf-8")
+        raise InputError(f"annotation {text[:60]!r}: readers of WFDB files take texts for Latin-1; reword it, or keep the record in EDF+")
     if len(raw) > _MOST_TEXT:
         raise InputError(f"annotation {text[:30]!r}… has {len(raw)} bytes; WFDB holds {_MOST_TEXT}")
     return np.frombuffer(((_AUX << 10) | len(raw)).to_bytes(2, "little") + raw + b"\0" * (len(raw) % 2), dtype="<u2")

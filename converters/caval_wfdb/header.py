@@ -10,10 +10,11 @@ from pathlib import Path
 from caval.errors import FileError
 from caval.units import is_pressure_unit
 
-__all__ = ["NO_UNIT", "Header", "Segment", "SignalLine", "read_header", "safe_name"]
+__all__ = ["NO_UNIT", "Header", "Segment", "SignalLine", "is_annotation_ending", "read_header", "safe_name"]
 
 NO_UNIT = "(none)"
 """What our own comments call an empty unit."""
+_NO_ANNOTATION = frozenset(("hea", "dat", "edf", "bdf", "csv", "tsv", "json", "png", "pdf", "txt", "md", "html", "gz", "zip", "parquet"))
 _DEFAULT_RATE_HZ = 250.0
 _DEFAULT_GAIN = 200.0
 _MOST_SIGNALS = 4096
@@ -62,6 +63,11 @@ class Header:
     segments: tuple[Segment, ...] = ()
     comments: tuple[str, ...] = ()
     text: dict[str, str] = field(default_factory=dict)
+
+
+def is_annotation_ending(ending: str) -> bool:
+    """Whether a file ending could be the name of an annotator: letters and digits, and not that of another kind of file."""
+    return ending.isalnum() and ending.lower() not in _NO_ANNOTATION
 
 
 def safe_name(name: str, header: str) -> str:
@@ -130,7 +136,7 @@ def _start_time(words: list[str]) -> datetime | None:
         clock = [float(part) for part in words[0].split(":")]
         hour, minute, second = ([0.0] * (3 - len(clock)) + clock)[:3]
         whole = int(second)
-        return datetime(year, month, day, int(hour), int(minute), whole, round((second - whole) * 1e6))
+        return datetime(year, month, day, int(hour), int(minute), whole, min(999_999, round((second - whole) * 1e6)))
     except (ValueError, OverflowError):
         return None
 

@@ -13,12 +13,10 @@ from caval.errors import FileError
 from caval.recording import Calibration, Channel, Recording
 from caval.track import Track
 from caval_wfdb.annotation import read_annotations
-from caval_wfdb.header import NO_UNIT, Header, SignalLine, read_header
+from caval_wfdb.header import NO_UNIT, Header, SignalLine, is_annotation_ending, read_header
 from caval_wfdb.samples import BITS, calibration_of, frames_held, source_of
 
-__all__ = ["header_path", "is_annotation_ending", "read_wfdb"]
-
-_NO_ANNOTATION = frozenset(("hea", "dat", "edf", "bdf", "csv", "tsv", "json", "png", "pdf", "txt", "md", "html", "gz", "zip", "parquet"))
+__all__ = ["header_path", "read_wfdb"]
 
 
 def header_path(path: Path) -> Path:
@@ -177,11 +175,6 @@ def _tracks(hea: Path, frame_rate: float) -> tuple[dict[str, Track], list[str]]:
         except FileError as error:
             notes.append(f"annotations left out: {error}")
     return tracks, notes
-
-
-def is_annotation_ending(ending: str) -> bool:
-    """Whether a file ending could be the name of an annotator: letters and digits, and not that of another kind of file."""
-    return ending.isalnum() and ending.lower() not in _NO_ANNOTATION
 
 
 def _escaped(name: str) -> str:

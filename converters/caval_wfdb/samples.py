@@ -20,8 +20,9 @@ BITS = {
 """Bits of each signal format that wfdb reads."""
 _BYTES = {"16": 2.0, "61": 2.0, "160": 2.0, "212": 1.5, "310": 4 / 3, "311": 4 / 3, "24": 3.0, "32": 4.0, "80": 1.0, "8": 1.0}
 """Bytes a sample, where a format has as many for each."""
-_PLAIN = {"16": ("<i2", 0), "61": (">i2", 0), "160": ("<u2", 32768), "80": ("u1", 128), "32": ("<i4", 0)}
+_PLAIN = {"16": ("<i2", 0), "61": (">i2", 0), "160": ("<u2", 32768), "80": ("u1", 128), "32": ("<i4", 0), "8": ("i1", 0)}
 """Formats of whole bytes as NumPy has them, and the stored number that stands for 0."""
+_BLOCK = 1 << 20
 _MOST_FRAMES_A_BYTE = 8192
 """Of FLAC, whose tightest block holds 65,535 samples in 14 bytes."""
 
@@ -75,11 +76,25 @@ def source_of(hea: Path, lines: tuple[SignalLine, ...], place: int, number: int,
     n_frames : int
         Frames in the file.
     """
-    return _memory_mapped(hea, lines, place, n_frames) if lines[place].fmt in _PLAIN else _through_wfdb(hea, lines[place], number)
+    fmt = lines[place].fmt
+    if fmt == "8":
+        return _summed(_memory_mapped(hea, lines, place, n_frames), int(lines[place].text.get("initial", 0)))
+    return _memory_mapped(hea, lines, place, n_frames) if fmt in _PLAIN else _through_wfdb(hea, lines[place], number)
+
+
+def _summed(steps: Callable[[int, int], NDArray], initial: int) -> Callable[[int, int], NDArray]:
+    """Source of a signal stored as its first differences (format 8): every part needs all before it, which wfdb leaves out."""
+
+    def source(start: int, stop: int) -> NDArray:
+        places = range(0, start, _BLOCK)
+        before = sum(int(steps(at, min(at + _BLOCK, start)).sum(dtype=np.int64)) for at in places)
+        return (initial + before + np.cumsum(steps(start, stop), dtype=np.int64)).astype(np.int32)
+
+    return source
 
 
 def _memory_mapped(hea: Path, lines: tuple[SignalLine, ...], place: int, n_frames: int) -> Callable[[int, int], NDArray]:
-    """Source of a signal of a file in which every sample is a number of whole bytes."""
+    """Source of the stored numbers of a signal, in a file in which every sample is a number of whole bytes."""
     widths = [line.samples_per_frame for line in lines]
     first, width, frame = sum(widths[:place]), widths[place], sum(widths)
     path, offset = hea.parent / lines[0].file, lines[0].offset

@@ -17,7 +17,7 @@ from caval.track import Track
 from caval.vocabulary import parse_text
 from caval_wfdb.annotation import TRACK_ENDING, track_bytes
 from caval_wfdb.frames import BITS, write_samples
-from caval_wfdb.header import NO_UNIT
+from caval_wfdb.header import NO_UNIT, is_annotation_ending
 
 __all__ = ["ticks_per_second", "write_marked", "write_wfdb"]
 
@@ -100,7 +100,7 @@ def _by_ending(recording: Recording) -> dict[str, Track]:
     for name, track in recording.tracks.items():
         ending = "atr" if name == "annotations" else "".join(c for c in name if c.isalnum() and c.isascii())
         if len(track):
-            ending = ending if ending not in ("", "hea", "dat") else f"{ending}ann"
+            ending = ending if is_annotation_ending(ending) else f"{ending}ann"
             found[ending] = found.get(ending, Track.empty()).join(track)
     return found
 

@@ -58,6 +58,7 @@ def by_mne(path: Path) -> Seen:
 class TestEdf(FormatCompliance):
     suffix = ".edf"
     others = (by_pyedflib, by_edfio, by_mne)
+    refused_texts = ("a\x14b", "a\x00", "\x15")
     time_step_s = 1e-9
 
 
@@ -108,6 +109,47 @@ def test_2_1_header_text_travels_as_it_is(tmp_path: Path) -> None:
     patch(path, 88, "Startdate 29-FEB-2024 EMG561 BK/JOP Sony. MNC R Median Nerve.", 80)
     again = write(tmp_path, caval.read(path), "again.edf")
     assert again.read_bytes() == path.read_bytes()
+
+
+def test_2_1_fields_of_fixed_width_in_printable_ascii(tmp_path: Path) -> None:
+    """Read by the widths of the specification alone: 256 bytes, then 256 a signal, field by field."""
+    raw = write(tmp_path, record().with_track("annotations", track())).read_bytes()
+    n_signals = int(raw[252:256])
+    head = raw[: 256 * (n_signals + 1)]
+    assert all(32 <= byte <= 126 for byte in head)
+    assert (raw[:8], raw[168:184], raw[184:192], raw[192:197]) == (b"0       ", b"29.02.2423.59.58", b"1280    ", b"EDF+C")
+    at, columns = 256, []
+    for width in (16, 80, 8, 8, 8, 8, 8, 80, 8, 32):
+        columns.append([head[at + i * width : at + (i + 1) * width].decode().rstrip() for i in range(n_signals)])
+        at += width * n_signals
+    assert at == len(head)
+    labels, _, units, low, high, digital_low, digital_high, _, counts, _ = columns
+    assert labels == ["ECG II", "CVP", "Paw", "EDF Annotations"]
+    assert units == ["mV", "mmHg", "cmH2O", ""]
+    assert (low[1], high[1], digital_low[1], digital_high[1]) == ("-327.67", "327.67", "-32767", "32767")
+    assert (float(low[3]), float(high[3]), digital_low[3], digital_high[3]) == (-1, 1, "-32768", "32767")
+    record_samples = sum(map(int, counts))
+    assert len(raw) == len(head) + int(raw[236:244]) * record_samples * 2
+    assert record_samples * 2 <= 61440
+
+
+@pytest.mark.parametrize(("start", "fraction"), [(START, "0.123456"), (START.replace(microsecond=0), "0"), (None, "0")])
+def test_2_2_4_every_data_record_begins_with_its_time(tmp_path: Path, start: datetime | None, fraction: str) -> None:
+    """+onset, 20, 20, 0; the fraction of the start time stands there and nowhere else; what is left of the signal is zeros."""
+    path = write(tmp_path, record(start_time=start).with_track("annotations", track()))
+    raw = path.read_bytes()
+    n_signals, n_records = int(raw[252:256]), int(raw[236:244])
+    width = 2 * int(raw[signal_field(path, 216, 8, n_signals - 1) :][:8])
+    body = raw[256 * (n_signals + 1) :]
+    size = len(body) // n_records
+    for number in range(n_records):
+        notes = body[(number + 1) * size - width : (number + 1) * size]
+        stamp = fraction if number == 0 else str(number) + fraction.removeprefix("0")
+        assert notes.startswith(f"+{stamp}\x14\x14\0".encode())
+        assert notes.endswith(b"\0")
+        for tal in notes.rstrip(b"\0").split(b"\0"):
+            assert tal[:1] in (b"+", b"-")
+            assert tal.endswith(b"\x14")
 
 
 def test_2_1_what_is_no_number_is_an_error(tmp_path: Path) -> None:
@@ -422,13 +464,6 @@ def test_marked_file_opened_by_mne_and_pyedflib(tmp_path: Path, start: datetime 
         raw = mne.io.read_raw_edf(path, preload=False, verbose="error")
     seen = raw.annotations
     same_annotations(Track.build(seen.onset, list(seen.description), duration_s=seen.duration), whole, 1e-6)
-
-
-def test_marks_of_an_earlier_run_give_way(tmp_path: Path) -> None:
-    theirs = Track.build([0.25], ["intubation"])
-    (first,) = write_marked(record().with_track("annotations", theirs), marks(), tmp_path, "a")
-    (second,) = write_marked(caval.read(first), marks(40), tmp_path, "b")
-    same_annotations(read_annotations(second), theirs.join(marks(40)), 1e-9)
 
 
 def test_marked_bdf_stays_bdf_and_an_empty_track_is_written_too(tmp_path: Path) -> None:

@@ -1,4 +1,4 @@
-"""`write_marked` of every format: the track of a result, opened by the libraries that laboratories use, is the track."""
+"""`write_marked` of every format: the track of a result, opened by the libraries that laboratories use, is the track; and the way back."""
 
 from __future__ import annotations
 
@@ -105,7 +105,9 @@ def test_wfdb_in_wfdb(tmp_path: Path) -> None:
     assert np.abs(read.sample[is_mark] / 500 - marks["time_s"])[1:].max() <= TICK / 2
     assert read.sample[is_mark][0] == 1
     assert set(read.chan[is_mark]) == {1}
-    assert (~is_mark).sum() == 2 * 4
+    rest = {(text, int(chan)) for text, chan in zip(read.aux_note, read.chan, strict=True) if len(text) > len("CVP/a")}
+    spans = (("BAD_CVP/flat", 1), ("BAD_ABP/clipped", 2), ("BAD_ECG/noise", 0), ("CVP/drift", 1))
+    assert rest == {(text + end, channel) for text, channel in spans for end in (" begin", " end")}
     for channel, values in zip(drawn().channels, wfdb.rdrecord(str(tmp_path / "rec"), physical=False, smooth_frames=False).e_d_signal,
                                strict=True):
         np.testing.assert_array_equal(values, channel.digital())
@@ -143,6 +145,7 @@ def test_no_marks(tmp_path: Path) -> None:
         assert not len(track.marks())
         made = marked("wfdb", drawn(), track, tmp_path / f"w{number}")
         assert {p.name for p in made} == {"rec.hea", "rec.dat", "rec.atr"}
+        assert marked("wfdb", caval.read(tmp_path / f"w{number}" / "rec.hea"), track, tmp_path / f"beside{number}") == ()
         made = marked("edf", drawn(), track, tmp_path / f"e{number}")
         same_annotations(read_track(made[0]), OTHERS.join(track), 1e-9)
         for name in ("csv", "bids"):
@@ -182,3 +185,15 @@ def test_thousands_of_marks_in_a_short_record(tmp_path: Path) -> None:
         got = read_track(path)
         assert len(got) == 6000
         np.testing.assert_allclose(got.onset_s, onset, rtol=0, atol=TICK / 2 if name == "wfdb" else 1e-9)
+
+
+def test_there_and_back_is_the_same_file(tmp_path: Path) -> None:
+    """EDF to WFDB to EDF to the byte, where annotations lie on ticks; the samples of WFDB to EDF to WFDB to the byte."""
+    notes = Track.build([0.5, 1.25, 3.0], ["intubation", "Müller: 5 µg", "PEEP"], duration_s=[0.0, 0.75, 2.0])
+    caval.write(record().with_track("annotations", notes), tmp_path / "a.edf")
+    for source, target in (("a.edf", "b.hea"), ("b.hea", "c.edf"), ("c.edf", "d.hea")):
+        caval.convert(tmp_path / source, tmp_path / target)
+    assert (tmp_path / "c.edf").read_bytes() == (tmp_path / "a.edf").read_bytes()
+    for ending in ("dat", "atr"):
+        assert (tmp_path / f"d.{ending}").read_bytes() == (tmp_path / f"b.{ending}").read_bytes()
+    assert (tmp_path / "d.hea").read_text().replace("d.dat", "b.dat")[1:] == (tmp_path / "b.hea").read_text()[1:]

@@ -1,4 +1,4 @@
-"""WFDB: the compliance suite, header(5), signal(5), annot(5), and the traps of other readers."""
+"""WFDB: the compliance suite, header(5), signal(5), multi-segment records, and the traps of other readers."""
 
 from __future__ import annotations
 
@@ -12,16 +12,12 @@ import wfdb
 from numpy.typing import NDArray
 
 import caval
-from caval.api import read_track
 from caval.errors import FileError, InputError
 from caval.model.sketch import sketch
 from caval.recording import Calibration, Recording, Signal
 from caval.track import Track
-from caval_wfdb import write_marked
-from caval_wfdb.annotation import track_bytes
-from caval_wfdb.codec import decode, encode
 from caval_wfdb.detectors import xqrs
-from compliance import STEPS, FormatCompliance, Seen, one_line, record, same_annotations, track
+from compliance import STEPS, FormatCompliance, Seen, one_line, record
 
 
 def by_wfdb_package(path: Path) -> Seen:
@@ -47,6 +43,8 @@ def by_wfdb_package(path: Path) -> Seen:
 class TestWfdb(FormatCompliance):
     suffix = ".hea"
     others = (by_wfdb_package,)
+    texts = ("Blutdruck fällt", "5 µg/kg", "é")
+    refused_texts = ("5 cmH₂O PEEP", "ciśnienie", "中心静脉压", "Ã¤", "a\x00")
     samples_file = ".dat"
     time_step_s = 1 / 500
 
@@ -137,6 +135,18 @@ def test_a_time_without_a_date_is_noted(tmp_path: Path) -> None:
     got = caval.read(header(tmp_path, "rec 1 125 4 10:20:30", "rec.dat 16 100/mmHg 16 0 0 0 0 CVP", samples=np.arange(4)))
     assert got.start_time is None
     assert "10:20:30" in got.notes[0]
+
+
+@pytest.mark.parametrize(
+    ("words", "start"),
+    [("10:20:30.25 01/02/2020", datetime(2020, 2, 1, 10, 20, 30, 250000)), ("20:30 1/2/2020", datetime(2020, 2, 1, 0, 20, 30)),
+     ("5 01/02/2020", datetime(2020, 2, 1, 0, 0, 5)), ("10:20:59.9999999 01/02/2020", datetime(2020, 2, 1, 10, 20, 59, 999999)),
+     ("24:00:00 01/02/2020", None), ("10:20:30 02/30/2020", None)],
+)
+def test_start_times_as_header_5_spells_them(tmp_path: Path, words: str, start: datetime | None) -> None:
+    got = caval.read(header(tmp_path, f"rec 1 125 4 {words}", "rec.dat 16 100/mmHg 16 0 0 0 0 CVP", samples=np.arange(4)))
+    assert got.start_time == start
+    assert len(got.notes) == (start is None)
 
 
 def test_skew_moves_the_channel_and_comes_back(tmp_path: Path) -> None:
@@ -253,6 +263,35 @@ def test_formats_that_wfdb_writes(tmp_path: Path, fmt: str) -> None:
     np.testing.assert_array_equal(again.channels[0].physical(), channel.physical())
 
 
+@pytest.mark.parametrize("shape", [("8", "8"), ("8x3", "8")])
+def test_first_differences_of_format_8(tmp_path: Path, shape: tuple[str, str]) -> None:
+    """Packed by hand from signal(5). Of a part of such a record wfdb sums from the part's beginning; the whole it reads right."""
+    widths = [int(word[2:] or 1) for word in shape]
+    steps = np.random.default_rng(6).integers(-100, 100, (101, sum(widths)))
+    (tmp_path / "rec.dat").write_bytes(steps.astype("i1").tobytes())
+    lines = (f"rec.dat {word} 100/mmHg 16 0 {first} 0 0 P" for word, first in zip(shape, (50, -7), strict=True))
+    path = header(tmp_path, "rec 2 100 101", *lines)
+    for channel, theirs, first, column in zip(
+        caval.read(path).channels, by_wfdb(path), (50, -7), np.split(steps, widths[:1], axis=1), strict=True
+    ):
+        values = first + np.cumsum(column.reshape(-1))
+        np.testing.assert_array_equal(channel.digital(), values)
+        np.testing.assert_array_equal(theirs, values)
+        for start, stop in ((0, 1), (1, 2), (40, 60), (100, 101), (7, 7)):
+            np.testing.assert_array_equal(channel.digital(start, stop), values[start:stop])
+
+
+@pytest.mark.parametrize("fmt", ["212", "24", "80", "160", "310", "311"])
+def test_parts_of_a_frame_of_several_samples(tmp_path: Path, fmt: str) -> None:
+    """An odd number of frames of 3 + 1 samples, any bytes, against wfdb's reading of the whole."""
+    (tmp_path / "rec.dat").write_bytes(np.random.default_rng(8).integers(0, 256, 1700, dtype=np.uint8).tobytes())
+    path = header(tmp_path, "rec 2 100 101", f"rec.dat {fmt}x3 100/mmHg 16 0 0 0 0 CVP", f"rec.dat {fmt} 100/mmHg 16 0 0 0 0 P")
+    for channel, whole in zip(caval.read(path).channels, by_wfdb(path), strict=True):
+        np.testing.assert_array_equal(channel.digital(), whole)
+        for start, stop in ((0, 1), (1, 2), (7, 50), (33, 101), (100, 101)):
+            np.testing.assert_array_equal(channel.digital(start, stop), whole[start:stop])
+
+
 @pytest.mark.parametrize("fmt", ["61", "160", "310", "311"])
 def test_formats_that_wfdb_only_reads(tmp_path: Path, fmt: str) -> None:
     """Packed by hand from signal(5)."""
@@ -340,178 +379,6 @@ def test_segments_are_not_made_of_segments(tmp_path: Path) -> None:
     with pytest.raises(FileError, match="made of segments") as error:
         caval.read(path)
     one_line(error)
-
-
-# annot(5)
-
-
-def test_annotations_are_those_that_wfdb_reads(tmp_path: Path) -> None:
-    write(tmp_path, record().with_track("annotations", track()))
-    theirs = wfdb.rdann(str(tmp_path / "rec"), "atr")
-    assert theirs.fs == 500
-    assert set(theirs.symbol) == {'"'}
-    assert list(theirs.aux_note).count("same time begin") == list(theirs.aux_note).count("same time end") == 1
-    assert list(theirs.sample[:2]) == [-750, 1]  # at 0 s a note would vanish there: it stands one tick later
-
-
-def test_beats_codes_and_fields_go_through(tmp_path: Path) -> None:
-    """A file of wfdb's own, read and written by us, read by wfdb."""
-    write(tmp_path, record())
-    sent = {
-        "sample": np.array([10, 400, 900, 1500, 1500, 200_000]), "symbol": ["N", "V", "+", '"', "p", "N"],
-        "subtype": np.array([0, 1, 0, -128, 0, 127]), "chan": np.array([0, 0, 2, 255, 1, 0]), "num": np.array([0, 3, 0, 0, 5, 127]),
-        "aux_note": ["", "fusion?", "(AFIB", "note", "", ""],
-    }
-    wfdb.wrann("rec", "man", fs=500, write_dir=str(tmp_path), **{k: v.copy() for k, v in sent.items()})
-    got = caval.read(tmp_path / "rec")
-    assert list(got.tracks) == ["man"]
-    assert list(got.tracks["man"].text) == ["N", "V fusion?", "+ (AFIB", "note", "p", "N"]
-    np.testing.assert_array_equal(got.tracks["man"].onset_s, sent["sample"] / 500)
-    np.testing.assert_allclose(got.tracks["man"].beat_times_s(), [0.02, 0.8, 400.0])
-    write(tmp_path, got, "copy")
-    copy = wfdb.rdann(str(tmp_path / "copy"), "man")
-    for name in ("sample", "subtype", "num"):
-        np.testing.assert_array_equal(getattr(copy, name), sent[name], err_msg=name)
-    assert copy.symbol == sent["symbol"]
-    assert copy.aux_note == sent["aux_note"]
-
-
-def test_ticks_of_another_rate_are_rescaled(tmp_path: Path) -> None:
-    write(tmp_path, record())
-    wfdb.wrann("rec", "slow", np.array([100, 250]), symbol=["N", "N"], fs=100, write_dir=str(tmp_path))
-    wfdb.wrann("rec", "none", np.array([100, 250]), symbol=["N", "N"], write_dir=str(tmp_path))
-    got = caval.read(tmp_path / "rec.hea").tracks
-    np.testing.assert_allclose(got["slow"].onset_s, [1.0, 2.5])
-    np.testing.assert_allclose(got["none"].onset_s, [100 / 25, 250 / 25])  # without a statement: frames
-
-
-def test_a_truncated_annotation_file_says_so(tmp_path: Path) -> None:
-    """wfdb returns what there is, without a word."""
-    write(tmp_path, record().with_track("annotations", track()))
-    path = tmp_path / "rec.atr"
-    whole = path.read_bytes()
-    for keep in range(2, len(whole) - 1, 7):
-        path.write_bytes(whole[:keep])
-        with pytest.raises(FileError) as error:
-            read_track(path)
-        assert "rec.atr" in one_line(error)
-    got = caval.read(tmp_path / "rec.hea")
-    assert not got.tracks
-    assert "annotations left out" in got.notes[0]
-
-
-def test_other_files_beside_a_record_are_left_alone(tmp_path: Path) -> None:
-    write(tmp_path, record())
-    (tmp_path / "rec.txt").write_text("notes")
-    (tmp_path / "rec_marked.edf").write_bytes(b"x")
-    (tmp_path / "rec2.atr").write_bytes(b"\0\0")
-    got = caval.read(tmp_path / "rec.hea")
-    assert not got.tracks
-    assert not got.notes
-
-
-def test_texts_at_the_limit_of_255_bytes(tmp_path: Path) -> None:
-    """A text of 256 bytes corrupts a file that wfdb writes, without an error."""
-    track_ = Track.build([1.0, 2.0], ["x" * 255, "after"])
-    (tmp_path / "rec.cvp").write_bytes(track_bytes(track_, 500.0))
-    assert wfdb.rdann(str(tmp_path / "rec"), "cvp").aux_note == ["x" * 255, "after"]
-    with pytest.raises(InputError, match="256 bytes; WFDB holds 255") as error:
-        track_bytes(Track.build([1.0], ["x" * 256]), 500.0)
-    one_line(error)
-
-
-def test_text_is_latin_1_for_other_readers_where_it_can_be(tmp_path: Path) -> None:
-    (tmp_path / "rec.cvp").write_bytes(track_bytes(Track.build([1.0], ["fällt, 5 µg"]), 500.0))
-    assert wfdb.rdann(str(tmp_path / "rec"), "cvp").aux_note == ["fällt, 5 µg"]
-    for text in ("Ã¤", "日本", "é"):
-        (tmp_path / "rec.cvp").write_bytes(track_bytes(Track.build([1.0], [text]), 500.0))
-        assert list(read_track(tmp_path / "rec.cvp").text) == [text]
-
-
-def test_long_silences(tmp_path: Path) -> None:
-    onset = np.array([0.5, 0.5 + 1023 / 500, 0.5 + 2047 / 500, 5000.0, 4_000_000.0])
-    (tmp_path / "rec.cvp").write_bytes(track_bytes(Track.build(onset, list("12345")), 500.0))
-    np.testing.assert_allclose(read_track(tmp_path / "rec.cvp").onset_s, onset, atol=1e-9)
-    np.testing.assert_array_equal(wfdb.rdann(str(tmp_path / "rec"), "cvp").sample, np.rint(onset * 500))
-    with pytest.raises(InputError, match="ticks apart"):
-        track_bytes(Track.build([0.0, 1e8], ["a", "b"]), 500.0)
-
-
-def test_spans_of_one_text_that_follow_or_overlap(tmp_path: Path) -> None:
-    spans = Track.build([1.0, 2.0, 2.5], ["BAD_CVP/flat"] * 3, duration_s=[1.0, 1.0, 4.0], channel=1)
-    (tmp_path / "rec.cvp").write_bytes(track_bytes(spans, 500.0))
-    got = read_track(tmp_path / "rec.cvp")
-    np.testing.assert_allclose(got.onset_s, spans.onset_s)
-    np.testing.assert_allclose(got.duration_s, spans.duration_s)
-    np.testing.assert_array_equal(got.channel, 1)
-
-
-def test_fields_out_of_range_are_refused() -> None:
-    columns = {name: np.array([1]) for name in ("tick", "code", "subtype", "chan", "num")} | {"text": np.array([""], dtype=object)}
-    for name, value in (("chan", 256), ("num", 200), ("subtype", -129)):
-        with pytest.raises(InputError, match=name):
-            encode(columns | {name: np.array([value])}, 500.0)
-    with pytest.raises(InputError, match="in order"):
-        encode({k: np.repeat(v, 2) for k, v in columns.items()} | {"tick": np.array([2, 1])}, 500.0)
-
-
-def test_bytes_that_are_no_annotation_file() -> None:
-    for raw in (b"", b"\0", b"odd", b"time_s,mark\n1.0,a\n\n", bytes(range(2, 250))):
-        with pytest.raises(FileError) as error:
-            decode(raw, "x.atr")
-        one_line(error)
-
-
-# marked records, read by wfdb
-
-
-def marks(n: int = 300) -> Track:
-    onset = np.sort(np.random.default_rng(3).uniform(0.1, 7.9, n))
-    text = [f"CVP/{'acxvy'[i % 5]}" for i in range(n)]
-    spans = [(1.0, 0.75, "BAD_CVP/flat", 1), (3.0, 2.0, "BAD_ECG/noise", 0)]
-    return Track.build(
-        np.concatenate([onset, [s[0] for s in spans]]), [*text, *(s[2] for s in spans)],
-        duration_s=np.concatenate([np.zeros(n), [s[1] for s in spans]]), channel=np.concatenate([np.ones(n), [s[3] for s in spans]]),
-    )
-
-
-def test_marked_record_from_wfdb_is_one_annotation_file(tmp_path: Path) -> None:
-    path = write(tmp_path, record())
-    out = tmp_path / "out"
-    out.mkdir()
-    made = write_marked(caval.read(path), marks(), out, "rec")
-    assert [p.name for p in made] == ["rec.cvp"]
-    theirs = wfdb.rdann(str(out / "rec"), "cvp")
-    assert theirs.fs == 500  # the fastest channel's
-    assert len(theirs.sample) == 300 + 2 * 2
-    notes = np.array(theirs.aux_note)
-    is_mark = np.char.startswith(notes, "CVP/")
-    np.testing.assert_allclose(theirs.sample[is_mark] / 500, marks().onset_s[marks().duration_s == 0], rtol=0, atol=0.5 / 500 + 1e-9)
-    assert list(notes[is_mark]) == list(marks().text[marks().duration_s == 0])
-    assert set(theirs.chan[is_mark]) == {1}
-    assert {(n, c) for n, c in zip(notes[~is_mark], theirs.chan[~is_mark], strict=True)} == {
-        ("BAD_CVP/flat begin", 1), ("BAD_CVP/flat end", 1), ("BAD_ECG/noise begin", 0), ("BAD_ECG/noise end", 0),
-    }
-    same_annotations(read_track(out / "rec.cvp"), marks(), 1 / 500)
-    np.testing.assert_array_equal(np.sort(read_track(out / "rec.cvp").channel), np.sort(marks().channel))
-
-
-def test_marked_record_from_elsewhere_brings_its_signals(tmp_path: Path) -> None:
-    theirs = Track.build([0.5], ["intubation"])
-    made = write_marked(record().with_track("annotations", theirs), marks(), tmp_path, "rec")
-    assert {p.name for p in made} == {"rec.hea", "rec.dat", "rec.cvp", "rec.atr"}
-    assert wfdb.rdann(str(tmp_path / "rec"), "atr").aux_note == ["intubation"]
-    for channel, read in zip(record().channels, by_wfdb(tmp_path / "rec.hea"), strict=True):
-        np.testing.assert_array_equal(read, channel.digital())
-    assert set(caval.read(tmp_path / "rec.hea").tracks) == {"atr", "cvp"}
-
-
-def test_no_marks_no_file(tmp_path: Path) -> None:
-    path = write(tmp_path, record())
-    spans = Track.build([1.0], ["BAD_CVP/disconnected"], duration_s=[6.0])
-    for track_ in (Track.empty(), spans):
-        assert write_marked(caval.read(path), track_, tmp_path, "rec") == ()
-    assert not (tmp_path / "rec.cvp").exists()
 
 
 # the detector

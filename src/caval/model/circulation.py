@@ -7,8 +7,9 @@
     ├─ superior vena cava ─── upper-body veins ◀──────────────────────────────────────────────────────────────┤
     └─ inferior vena cava ─── abdominal veins ── kidneys, splanchnic, legs ◀──────────────────────────────────┘
 
-The a wave is the atrium's own elastance; c the bulge of the closed tricuspid leaflets as the ventricle's pressure rises; x the room that the
-valve ring gives the atrium as it descends with ejection; v venous return against the closed valve; y the emptying when it opens.
+The a wave is the atrium's own elastance; c the bulge of the closed tricuspid leaflets as the ventricle's pressure rises; x the room that
+the valve ring gives the atrium as it descends with ejection; v venous return against the closed valve, and the ring's recoil as the
+long-axis fibres let go; y the emptying when the valve opens.
 
 Valves are those of Mynard et al. 2012 (inertia, Bernoulli resistance, an opening that follows the pressure across). Their flow is
 advanced implicitly (the quadratic of the backward Euler step is solved in closed form), so that a closing valve, stiff without bound, needs
@@ -76,25 +77,30 @@ class Breathing:
         if self.mode not in ("spontaneous", "ventilated", "none"):
             raise InputError(f"breathing.mode = {self.mode!r}: allowed are spontaneous, ventilated, none")
         for name, low, high, unit in (
-            ("rate_per_min", 2, 80, "1/min"), ("inspiration_s", 0.2, 20, "s"), ("swing_mmhg", 0, 40, "mmHg"), ("pleural_mmhg", -20, 20, "mmHg"),
-            ("peep_cmh2o", 0, 30, "cmH2O"), ("drive_cmh2o", 0, 60, "cmH2O"), ("transmitted", 0, 1, ""),
+            ("rate_per_min", 2, 80, "1/min"),
+            ("inspiration_s", 0.2, 20, "s"),
+            ("swing_mmhg", 0, 40, "mmHg"),
+            ("pleural_mmhg", -20, 20, "mmHg"),
+            ("peep_cmh2o", 0, 30, "cmH2O"),
+            ("drive_cmh2o", 0, 60, "cmH2O"),
+            ("transmitted", 0, 1, ""),
         ):
             if not low <= getattr(self, name) <= high:
                 raise InputError(f"breathing.{name} = {getattr(self, name)!r}: allowed are {low:g} to {high:g} {unit}".rstrip())
-        if self.inspiration_s > 0.9 * 60.0 / self.rate_per_min:
-            raise InputError(f"breathing.inspiration_s = {self.inspiration_s:g}: longer than nine tenths of a breath ({60 / self.rate_per_min:g} s)")
+        period = 60.0 / self.rate_per_min
+        if self.inspiration_s > 0.9 * period:
+            raise InputError(f"breathing.inspiration_s = {self.inspiration_s:g}: longer than nine tenths of a breath ({period:g} s)")
 
     def starts_s(self, start_s: float, stop_s: float) -> Floats:
         """Onset of every inspiration in ``[start_s, stop_s)``."""
         if self.mode == "none":
             return np.empty(0)
         period = 60.0 / self.rate_per_min
-        return np.arange(np.ceil(start_s / period), np.ceil(stop_s / period)) * period
+        return np.arange(np.ceil(start_s / period), np.ceil(stop_s / period), dtype=np.float64) * period
 
     def pressures(self, time_s: Floats) -> tuple[Floats, Floats, Floats]:
         """Pleural, abdominal and airway pressure, mmHg, at times in seconds; a breath begins at 0 s."""
-        period, share = 60.0 / self.rate_per_min, self._shape(time_s)
-        del period
+        share = self._shape(time_s)
         if self.mode == "spontaneous":
             pleural = self.pleural_mmhg - self.swing_mmhg * share
             return pleural, self.swing_mmhg * share / 3.0, np.zeros_like(time_s)
@@ -176,14 +182,16 @@ def run(
     """
     stride = 1.0 / (rate * step_s)
     if not duration_s > 0 or abs(stride - round(stride)) > 1e-6 or stride < 1:
-        raise InputError(f"duration {duration_s!r} s at {rate!r} Hz with steps of {step_s!r} s: a length above 0 and whole steps a sample are needed")
+        raise InputError(
+            f"duration {duration_s!r} s at {rate!r} Hz with steps of {step_s!r} s: a length above 0 and whole steps a sample are needed"
+        )
     r = np.sort(np.asarray(r_times_s, dtype=np.float64))
     if not len(r):
         raise InputError("r_times_s is empty: a heart that never beats keeps no circulation")
     p = np.sort(np.asarray(p_times_s, dtype=np.float64))
     warm_up_s = max(0.0, warm_up_s)
     steps = round((warm_up_s + duration_s) * rate) * round(stride)
-    time = -warm_up_s + np.arange(steps) * step_s
+    time = np.arange(steps, dtype=np.float64) * step_s - warm_up_s
     pleural, abdominal, airway = _breath(breathing, time)
     gift = np.zeros(steps)
     for infusion in infusions:
@@ -200,7 +208,8 @@ def run(
     keep = slice(round(warm_up_s * rate), None)
     named = {name: out[keep, i] for i, name in enumerate(_OUT)}
     every = slice(round(warm_up_s * rate) * round(stride), None, round(stride))
-    pressures = {name: named[name] for name in _OUT[:10]} | {"pleural": pleural[every], "abdominal": abdominal[every], "airway": airway[every]}
+    around = {"pleural": pleural[every], "abdominal": abdominal[every], "airway": airway[every]}
+    pressures = {name: named[name] for name in _OUT[:10]} | around
     return Haemodynamics(
         rate, np.arange(len(named["ra"])) / rate, pressures,
         {name[2:]: named[name] for name in _OUT[10:14]} | {"leaflet": named["leaflet_ml"], "annulus": named["annulus_ml"]},
@@ -209,12 +218,13 @@ def run(
 
 
 def _breath(breathing: Breathing | Sequence[tuple[float, Breathing]] | None, time: Floats) -> tuple[Floats, Floats, Floats]:
-    parts = [(-np.inf, breathing or Breathing())] if isinstance(breathing, Breathing) or not breathing else list(breathing)
-    first = parts[0][1]
-    pressures = first.pressures(time)
-    for onset_s, later in parts[1:]:
-        pressures = tuple(np.where(time >= onset_s, new, old) for new, old in zip(later.pressures(time), pressures, strict=True))  # type: ignore[assignment]
-    return pressures
+    if breathing is None or isinstance(breathing, Breathing):
+        return (breathing or Breathing()).pressures(time)
+    pleural, abdominal, airway = breathing[0][1].pressures(time)
+    for onset_s, later in breathing[1:]:
+        since = slice(int(np.searchsorted(time, onset_s)), None)
+        pleural[since], abdominal[since], airway[since] = later.pressures(time[since])
+    return pleural, abdominal, airway
 
 
 def _before(times: Floats) -> Floats:
@@ -305,14 +315,14 @@ def _start(p: Circulation) -> Floats:
 
 @numba.njit(cache=True, fastmath=False)
 def _integrate(
-    v: Floats, chambers: Floats, valves: Floats, vessels: Floats, other: Floats, atrium: Floats, ventricle: Floats, ring: Floats, resets: NDArray[np.int64],
-    pleural: Floats, abdominal: Floats, gift: Floats, dt: float, stride: int,
+    v: Floats, chambers: Floats, valves: Floats, vessels: Floats, other: Floats, atrium: Floats, ventricle: Floats, ring: Floats,
+    resets: NDArray[np.int64], pleural: Floats, abdominal: Floats, gift: Floats, dt: float, stride: int,
 ) -> Floats:
     """March the loop; a row of `_OUT` every `stride` steps."""
     n = len(atrium)
     out = np.empty((n // stride, 28))
     q, z = np.zeros(4), np.zeros(4)
-    press, flow = np.zeros(14), np.zeros(18)
+    press, bulge = np.zeros(14), np.zeros(4)
     leaflet = annulus = 0.0
     full = v[1]
     beat = 0
@@ -321,7 +331,7 @@ def _integrate(
             full = v[1]
             beat += 1
         sac = pleural[k] + other[0] * np.exp((v[0] + v[1] + v[2] + v[3] + other[3] - other[1]) / other[2])
-        bulge = np.array([leaflet - annulus, -leaflet, 0.0, 0.0])
+        bulge[0], bulge[1] = leaflet - annulus, -leaflet
         e_ra = 0.0
         for i in range(4):
             act = atrium[k] if i % 2 == 0 else ventricle[k]

@@ -67,7 +67,7 @@ class Pericardium:
     """Pressure k·exp((V − v0)/φ) on the whole heart; V counts the blood in the four chambers, the muscle and the fluid."""
 
     k_mmhg: float = _value(0.5, 0.0, 50.0, "mmHg", _SAC)
-    v0_ml: float = _value(655.0, 50.0, 2000.0, "ml", _SAC)
+    v0_ml: float = _value(640.0, 50.0, 2000.0, "ml", _SAC)
     phi_ml: float = _value(40.0, 1.0, 500.0, "ml", _SAC)
     muscle_ml: float = _value(260.0, 0.0, 1000.0, "ml", "from memory")
     fluid_ml: float = _value(20.0, 0.0, 2000.0, "ml", "from memory; an effusion adds to it")
@@ -77,15 +77,15 @@ class Pericardium:
 class Heart:
     """Timing, and what the ventricle does to the atrium through the valve ring."""
 
-    ventricle_delay_s: float = _value(0.025, 0.0, 0.2, "s", "R peak to first pressure rise; from memory")
-    ventricle_peak_s: float = _value(0.29, 0.05, 1.0, "s", "time to peak elastance at an interval of 1 s, grows with its square root; from memory")
+    ventricle_delay_s: float = _value(0.015, 0.0, 0.2, "s", "R peak to first pressure rise; calibrated to c 50 to 100 ms after R")
+    ventricle_peak_s: float = _value(0.295, 0.05, 1.0, "s", "time to peak elastance at an interval of 1 s, as its root; from memory")
     atrium_delay_s: float = _value(0.04, 0.0, 0.2, "s", "P onset to first atrial tension; from memory")
-    atrium_length_s: float = _value(0.18, 0.03, 0.5, "s", "length of atrial contraction; calibrated to P onset → a of 80 to 100 ms")
-    leaflet_c: float = _value(0.15, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
-    leaflet_lag_s: float = _value(0.010, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
-    annulus_share: float = _value(0.53, 0.0, 1.0, "1", "atrial room gained by the descent of the ring, per ml the ventricle ejects; calibrated to x")
-    annulus_lag_s: float = _value(0.033, 0.002, 0.2, "s", "calibrated to x")
-    annulus_recoil: float = _value(0.53, 0.0, 1.0, "1", "share of the descent that goes with the ventricle's tension, before it refills; calibrated to v")
+    atrium_length_s: float = _value(0.19, 0.03, 0.5, "s", "length of atrial contraction; calibrated to P onset → a of 80 to 100 ms")
+    leaflet_c: float = _value(0.30, 0.0, 2.0, "ml/mmHg", "bulge of the closed tricuspid leaflets; calibrated to c")
+    leaflet_lag_s: float = _value(0.008, 0.002, 0.2, "s", "calibrated to c 50 to 100 ms after R")
+    annulus_share: float = _value(0.54, 0.0, 1.0, "1", "atrial room gained by the ring's descent per ml ejected; calibrated to x")
+    annulus_lag_s: float = _value(0.02, 0.002, 0.2, "s", "calibrated to x")
+    annulus_recoil: float = _value(0.56, 0.0, 1.0, "1", "share of the descent lost with the tension, before refilling; calibrated to v")
 
 
 @dataclass(frozen=True)
@@ -93,10 +93,10 @@ class Circulation:
     """The closed loop. Build others with `with_values`."""
 
     blood_volume_ml: float = _value(5300.0, 300.0, 12000.0, "ml", _HELDT)
-    ra: Chamber = field(default_factory=lambda: Chamber.of(14.0, 0.235, 0.40))
-    rv: Chamber = field(default_factory=lambda: Chamber.of(23.0, 0.065, 0.51))
-    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.27, 0.44))
-    lv: Chamber = field(default_factory=lambda: Chamber.of(18.0, 0.102, 3.1))
+    ra: Chamber = field(default_factory=lambda: Chamber.of(9.0, 0.255, 0.53))
+    rv: Chamber = field(default_factory=lambda: Chamber.of(10.0, 0.06, 0.455))
+    la: Chamber = field(default_factory=lambda: Chamber.of(24.0, 0.42, 1.0))
+    lv: Chamber = field(default_factory=lambda: Chamber.of(18.0, 0.102, 3.2))
     tricuspid: Valve = field(default_factory=lambda: Valve(8.0, 0.0, 40.0, 53.0, 1.5))
     pulmonary: Valve = field(default_factory=lambda: Valve(5.0, 0.0, 27.0, 27.0, 1.5))
     mitral: Valve = field(default_factory=lambda: Valve(6.0, 0.0, 27.0, 53.0, 1.5))
@@ -179,7 +179,8 @@ def _check_value(f: Field[Any], name: str, value: Any) -> None:
 _CHANGED = {
     "blood_volume_ml": "5700; calibrated: mean right-atrial pressure of 3 with these ventricles",
     "ra.e_rest": "0.30; calibrated: v of 4 to 5",
-    "ra.e_peak": "0.74; calibrated: a of 6",
+    "ra.e_peak": "0.74; calibrated: a of 6, and 10 on a shut valve",
+    "ra.v0_ml": "14; calibrated: as e_peak",
     "rv.v0_ml": "46; calibrated: end-systolic volume of 80 ml at a diastolic pressure that starts at 1",
     "rv.e_rest": "0.05; calibrated: the rise of diastolic pressure from y to the end-diastolic 6",
     "rv.e_peak": "1.3; calibrated: 25 mmHg with the lower unstressed volume",
@@ -188,9 +189,15 @@ _CHANGED = {
     "lv.v0_ml": "55; calibrated: end-systolic volume of 58 ml",
     "lv.e_rest": "0.11; calibrated: left-atrial mean of 8 at an end-diastolic volume of 140 ml",
     "lv.e_peak": "2.5; calibrated: 116/74 mmHg with the lower unstressed volume",
-    "pericardium.v0_ml": "641; calibrated: nearly slack at the healthy volume, so that y is not deeper than x",
+    "pericardium.v0_ml": "641; calibrated, within its rounding: nearly slack at the healthy volume, so that y is not deeper than x",
 }
 """What the healthy adult has otherwise than the base set: the base set's value, and why it was changed."""
+_OWN = {
+    "arteries.r": "from memory: a few per cent of the systemic resistance",
+    "arteries.c": "from memory; calibrated: pulse pressure of some 42 mmHg",
+    "arteries.v0_ml": "from memory: blood of the large arteries",
+}
+"""Values that the base set's condensed form does not give."""
 
 _CHILD_SIZE = 0.29
 """Blood of a child of 20 kg over the adult's."""
@@ -203,7 +210,8 @@ def _child() -> dict[str, tuple[float, str]]:
     values = {"blood_volume_ml": adult.blood_volume_ml * _CHILD_SIZE}
     for name in ("ra", "rv", "la", "lv"):
         chamber: Chamber = getattr(adult, name)
-        values |= {f"{name}.v0_ml": chamber.v0_ml * _CHILD_SIZE, f"{name}.e_rest": chamber.e_rest / 0.33, f"{name}.e_peak": chamber.e_peak / 0.38}
+        values |= {f"{name}.v0_ml": chamber.v0_ml * _CHILD_SIZE, f"{name}.e_rest": chamber.e_rest / 0.33}
+        values[f"{name}.e_peak"] = chamber.e_peak / 0.38
     for f in fields(adult):
         part = getattr(adult, f.name)
         if isinstance(part, Vessel):
@@ -223,7 +231,7 @@ _DILATED = "calibrated: ventricle that grew with the leak"
 
 _PRESETS: dict[str, dict[str, tuple[float, str]]] = {
     "healthy": {},
-    "hypovolaemia": {"blood_volume_ml": (4750.0, "calibrated: a tenth of the blood lost")},
+    "hypovolaemia": {"blood_volume_ml": (4800.0, "calibrated: a tenth of the blood lost")},
     "right_ventricular_failure": {
         "rv.e_peak": (0.26, "calibrated: half of the contractility"),
         "rv.e_rest": (0.09, "calibrated: end-diastolic 12 to 15"),
@@ -251,7 +259,7 @@ _PRESETS: dict[str, dict[str, tuple[float, str]]] = {
     },
     "tricuspid_stenosis": {
         "tricuspid.a_max_cm2": (1.0, "severe stenosis is at most 1 cm²; from memory"),
-        "ra.e_peak": (0.7, "calibrated: a hypertrophied atrium"),
+        "ra.e_peak": (0.85, "calibrated: a hypertrophied atrium"),
         "blood_volume_ml": (5600.0, _FULL),
     },
     "constriction": {
@@ -271,11 +279,14 @@ _PRESETS: dict[str, dict[str, tuple[float, str]]] = {
         "blood_volume_ml": (6300.0, _FULL),
     },
     "restrictive": {
-        "rv.e_rest": (0.08, "calibrated: steep y"),
-        "rv.stiffness": (0.012, "calibrated: stiffens as it fills; dip and plateau"),
+        "rv.e_rest": (0.05, "calibrated: yields at first, steep y"),
+        "rv.v0_ml": (30.0, "calibrated: as e_rest"),
+        "rv.stiffness": (0.022, "calibrated: stiffens as it fills; dip and plateau"),
         "lv.e_rest": (0.15, "calibrated: left-atrial mean above 10"),
-        "ra.e_peak": (0.7, "calibrated: tall a"),
-        "blood_volume_ml": (5900.0, _FULL),
+        "ra.e_rest": (0.35, "calibrated: the atrium's wall is stiff too"),
+        "ra.e_peak": (0.9, "calibrated: tall a"),
+        "heart.annulus_share": (0.3, "calibrated: poor long-axis motion; x no deeper than y"),
+        "blood_volume_ml": (6000.0, _FULL),
     },
     "child": _child(),
 }
@@ -309,6 +320,8 @@ def source(name: str, circulation: str = "healthy") -> str:
     head, _, tail = name.partition(".")
     known = {f.name: f for f in fields(getattr(parameters, head) if tail else parameters)}
     base = str(known[tail or head].metadata["source"])
+    if name in _OWN:
+        return _OWN[name]
     return f"{base} has {_CHANGED[name]}" if name in _CHANGED else base
 
 

@@ -26,8 +26,10 @@ Floats = NDArray[np.float64]
 _PROMINENCE_WINDOW_S = 0.6
 _LEAST_MMHG = 0.02
 """An extremum lower than this is none: the integrator's own ripple is a hundred times smaller."""
+_TENSION_S = 0.11
+"""From the onset of P to an atrial tension half developed."""
 _SHUT = 0.1
-"""Opening of the tricuspid valve, 0 to 1, below which an atrial contraction meets a shut one."""
+"""Opening of the tricuspid valve, 0 to 1, below which a contraction in systole meets a shut one."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,7 +41,8 @@ class _Extrema:
     @classmethod
     def of(cls, trace: Floats, rate: float, sign: float) -> _Extrema:
         index, _ = signal.find_peaks(sign * trace, plateau_size=(1, round(0.2 * rate)))
-        prominence = signal.peak_prominences(sign * trace, index, wlen=round(_PROMINENCE_WINDOW_S * rate) | 1)[0] if len(index) else np.empty(0)
+        window = round(_PROMINENCE_WINDOW_S * rate) | 1
+        prominence = signal.peak_prominences(sign * trace, index, wlen=window)[0] if len(index) else np.empty(0)
         keep = prominence >= _LEAST_MMHG
         index = index[keep]
         return cls(refine(sign * trace, index) / rate, sign * trace[index], prominence[keep])
@@ -72,7 +75,8 @@ def wave_truth(
     DataFrame
         ``time_s, mark, beat, pressure_mmhg, prominence_mmhg, state, detail``: state ``clear``; ``fused``, with NaN, for what has no
         extremum; ``unusable``, with NaN, for what stands, or would be looked for, inside a span. `beat` counts the R times from 0; an a
-        belongs to the R that follows it. `detail` is ``cannon`` for an a on a shut tricuspid valve.
+        belongs to the R that follows it. `detail` is ``cannon`` for an a
+        on a tricuspid valve that systole keeps shut.
     """
     peaks, troughs = (_Extrema.of(trace, rate, sign) for sign in (1.0, -1.0))
     r = rhythm.r_times_s
@@ -82,14 +86,14 @@ def wave_truth(
     p_next = _next(rhythm.p_times_s, opening) + delay_s
     v = peaks.highest(r_seen + 0.20, opens + 0.06)
     v_time = _time(peaks, v)
-    c = peaks.highest(r_seen + 0.02, np.fmin(r_seen + 0.15, v_time - 0.02))
-    c_time = _time(peaks, c)
+    c = peaks.highest(r_seen + 0.045, np.fmin(r_seen + 0.15, v_time - 0.02))
+    c_time = _time(peaks, c)  # 50 to 100 ms after R; before that the line still rings after a steep a
     x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), r_seen, v_time))
     y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, p_next + 0.10), following + delay_s + 0.02))
     rows = [
         _rows("v", v, peaks, r, 1.0, opens), _rows("x", x, troughs, r, -1.0, r_seen + 0.22), _rows("y", y, troughs, r, -1.0, opens + 0.08),
     ]
-    a_rows, taken = _atrial(peaks, rhythm, delay_s, heart, c)
+    a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, heart, c)
     c = np.where(np.isin(c, taken), -1, c)  # one peak cannot be both: the atrium's is its own
     rows += [_rows("c", c, peaks, r, 1.0, r_seen + 0.08), a_rows]
     marks = pd.concat(rows, ignore_index=True)
@@ -145,16 +149,16 @@ def _rows(mark: str, index: NDArray[np.int64], extrema: _Extrema, r: Floats, sig
 
 
 def _atrial(
-    peaks: _Extrema, rhythm: Rhythm, delay_s: float, heart: Haemodynamics, c: NDArray[np.int64]
+    peaks: _Extrema, rhythm: Rhythm, delay_s: float, opening: Floats, heart: Haemodynamics, c: NDArray[np.int64]
 ) -> tuple[pd.DataFrame, NDArray[np.int64]]:
     """The a of every P that has an R after it, and the peaks they stand on."""
     r, p = rhythm.r_times_s, rhythm.p_times_s
     beat = np.searchsorted(r, p)
     p, beat = p[beat < len(r)], beat[beat < len(r)]
     index = peaks.highest(p + delay_s + 0.05, p + delay_s + 0.20)
-    top = np.where(index >= 0, _time(peaks, index) - delay_s, p + 0.11)  # of the contraction, on the clock of the vessel
-    valve = heart.openings["tricuspid"]
-    shut = valve[np.clip(np.rint(top * heart.rate).astype(np.int64), 0, len(valve) - 1)] < _SHUT
+    tense, valve = p + _TENSION_S, heart.openings["tricuspid"]
+    systole = tense < np.append(opening, -np.inf)[np.searchsorted(r, tense) - 1]  # of the R before; the last place is for none
+    shut = systole & (valve[np.clip(np.rint(tense * heart.rate).astype(np.int64), 0, len(valve) - 1)] < _SHUT)
     shared = (index >= 0) & np.isin(index, c) & ~shut
     index = np.where(shared & (np.append(peaks.time, np.nan)[index] > p + delay_s + 0.16), -1, index)
     rows = _rows("a", index, peaks, p, 1.0, p + delay_s + 0.09)
