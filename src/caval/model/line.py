@@ -59,7 +59,7 @@ class Line:
     """
 
     natural_frequency_hz: float = 14.0
-    damping: float = 0.25
+    damping: float = 0.40
     delay_s: float = 0.010
     offset_mmhg: float = 0.0
     height_cm: float = 0.0

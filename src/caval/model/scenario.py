@@ -139,7 +139,8 @@ class Scenario:
         self.measuring()
         self.happenings()
         self.gifts()
-        schedule(self.schedule()[:1], 10.0)
+        for part in self.schedule():
+            schedule([{**part, "onset_s": 0.0}], 10.0)
 
 
 def _build(kind: type[Any], what: str, values: Mapping[str, Any]) -> Any:

@@ -153,7 +153,7 @@ def simulate(
     abp = measure(heart.pressures["arteries"], _MODEL_RATE_HZ, _ARTERY, (), sampling_rate=_PRESSURE_RATE_HZ, channel="ABP", seed=seeds[1])
     lead = ecg(beats, duration_s, _ECG_RATE_HZ, noise_mv=chosen.ecg_noise_mv, seed=seeds[2])
     lead = spoil_ecg(lead, _ECG_RATE_HZ, events, seed=seeds[3])
-    marks = wave_truth(fine.clean_mmhg, _MODEL_RATE_HZ, fine.delay_s, beats, heart)
+    marks = wave_truth(fine.clean_mmhg, _MODEL_RATE_HZ, fine.delay_s, beats, heart, spans=cvp.spans)
     starts = _inspirations(breaths, duration_s)
     noisy = [(e.onset_s, e.duration_s, "noise", "ECG II", "diathermy") for e in events if isinstance(e, Diathermy)]
     spans = pd.concat([cvp.spans, pd.DataFrame(noisy, columns=cvp.spans.columns)], ignore_index=True) if noisy else cvp.spans
