@@ -105,7 +105,7 @@ def wave_truth(
 
 def _without(marks: pd.DataFrame, spans: pd.DataFrame) -> pd.DataFrame:
     """The marks, those inside an unusable span without a place."""
-    bad = spans[[kind not in SPANS or SPANS[kind].unusable for kind in spans["kind"]]]
+    bad = spans[~spans["kind"].isin([kind for kind, term in SPANS.items() if not term.unusable])]
     place = marks["time_s"].fillna(marks["expected_s"]).to_numpy(float)
     hit = overlaps(place, place, bad) >= 0
     return marks.assign(
