@@ -109,7 +109,7 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
     if a is not None:
         places["a"] = a
     if "v" in places:
-        limit = min(places["v"] + 0.36, interval + min(places.get("a", 0.0), -0.02) - 0.03)
+        limit = min(places["v"] + 0.36, interval + places.get("a", 0.0) - 0.03)
         y = _best(troughs, time, -trace, span, (places["v"] + 0.05, limit), places["v"] + 0.17, 0.10, 3.0)
         if y is not None:
             places["y"] = y
@@ -130,7 +130,7 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
 def _systole(
     peaks: NDArray[np.int64], troughs: NDArray[np.int64], time: Floats, trace: Floats, interval: float, span: float
 ) -> dict[str, float]:
-    """The pair of x and v that fits best; without a pair, the one tall systolic wave, which is v (regurgitation leaves no x)."""
+    """The pair of x and v that fits best; without a pair, the wave of systole from which the trace falls far, which is v without an x."""
     v_usual = 0.47 * np.sqrt(min(interval, 1.6))
     late = peaks[(np.abs(time[peaks] - v_usual) < 0.17) & (time[peaks] < interval - 0.08)]
     best, places = -np.inf, {}
@@ -141,7 +141,7 @@ def _systole(
                 best, places = score, {"x": float(time[x]), "v": float(time[v])}
     if not places and len(late):
         tallest = late[np.argmax(trace[late])]
-        if trace[tallest] > trace.min() + 0.7 * span:
+        if trace[tallest] > trace[time > time[tallest]].min(initial=np.inf) + 0.3 * span:
             places = {"v": float(time[tallest])}
     return places
 
