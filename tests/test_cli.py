@@ -479,7 +479,13 @@ def test_stages_says_what_is_installed_and_whence(capsys: pytest.CaptureFixture[
 def test_simulate_writes_the_record_and_its_truth(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     options = ["--minutes", "0.3", "--seed", "5", "--set", "rhythm.heart_rate=80"]
     assert cli.main(["simulate", "healthy", str(tmp_path / "one.edf"), *options]) == 0
-    assert sorted(listing(tmp_path)) == ["one.edf", "one_truth_beats.csv", "one_truth_marks.csv", "one_truth_spans.csv"]
+    assert sorted(listing(tmp_path)) == [
+        "one.edf", "one_truth.json", "one_truth_beats.csv", "one_truth_marks.csv", "one_truth_spans.csv",
+    ]
+    said = json.loads((tmp_path / "one_truth.json").read_text(encoding="utf-8"))
+    assert said["seed"] == 5
+    assert 0.01 < said["delay_s"] < 0.06
+    assert said["rhythm"][0]["heart_rate"] == 80
     marks = pd.read_csv(tmp_path / "one_truth_marks.csv")
     assert {"a", "c", "x", "v", "y"} <= set(marks["mark"])
     assert "truth/a" in caval.read(tmp_path / "one.edf").annotations.texts

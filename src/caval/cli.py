@@ -243,7 +243,8 @@ def simulate(
     """Simulate a patient whose every wave, volume and compliance is known; write the record, and the truth beside it.
 
     The record carries the truth as annotations (truth/a, truth/R, truth/flush …); OUT_truth_marks.csv, OUT_truth_beats.csv and
-    OUT_truth_spans.csv hold it as tables. The patient is a closed-loop model, no person.
+    OUT_truth_spans.csv hold it as tables, OUT_truth.json what was asked and the line's delay. The patient is a closed-loop model, no
+    person.
     """
     settings = {name: _number(value) for name, value in _pairs(set_, "--set").items()}
     from caval.model.simulate import simulate as run

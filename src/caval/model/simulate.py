@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from typing import Any
 
@@ -90,9 +91,22 @@ class Simulation:
     scenario: Scenario
     recording: Recording
     truth: Truth
+    seed: int = 1
+
+    def summary(self) -> dict[str, Any]:
+        """What was simulated, and what is true of the whole record: delay, output, mean pressures."""
+        heart = self.truth.heart
+        means = {f"{name}_mean_mmhg": round(float(values.mean()), 3) for name, values in heart.pressures.items()}
+        return {
+            **asdict(self.scenario),
+            "seed": self.seed,
+            "delay_s": self.truth.delay_s,
+            "cardiac_output_l_min": round(heart.cardiac_output_l_min, 3),
+            **means,
+        }
 
     def write(self, path: str | Path, *, force: bool = False) -> list[Path]:
-        """Write the record with the truth as annotations, and STEM_truth_marks.csv, STEM_truth_beats.csv, STEM_truth_spans.csv beside it.
+        """Write the record with the truth as annotations, and STEM_truth_marks.csv, _beats.csv, _spans.csv and STEM_truth.json beside it.
 
         Raises
         ------
@@ -107,6 +121,8 @@ class Simulation:
             writer(self.recording.with_track("truth", self.truth.track), folder / path.name)
             for name, rows in (("marks", self.truth.marks), ("beats", self.truth.beats), ("spans", self.truth.spans)):
                 rows.to_csv(folder / f"{path.stem}_truth_{name}.csv", index=False)
+            said = json.dumps(self.summary(), indent=2, ensure_ascii=False) + "\n"
+            (folder / f"{path.stem}_truth.json").write_text(said, encoding="utf-8")
 
         return write_all(path.parent, make, force=force)
 
@@ -158,7 +174,7 @@ def simulate(
     noisy = [(e.onset_s, e.duration_s, "noise", "ECG II", "diathermy") for e in events if isinstance(e, Diathermy)]
     spans = pd.concat([cvp.spans, pd.DataFrame(noisy, columns=cvp.spans.columns)], ignore_index=True) if noisy else cvp.spans
     truth = Truth(marks, beat_truth(beats, heart), pd.DataFrame({"onset_s": starts}), spans, beats, heart, cvp.delay_s, cvp.clean_mmhg)
-    return Simulation(chosen, _recording(chosen.name, lead, cvp.digital, abp.digital, cvp.calibration), truth)
+    return Simulation(chosen, _recording(chosen.name, lead, cvp.digital, abp.digital, cvp.calibration), truth, seed)
 
 
 def _rhythm(scenario: Scenario, duration_s: float, seed: int) -> tuple[Rhythm, Rhythm]:
