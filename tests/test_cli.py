@@ -517,3 +517,11 @@ def test_simulate_names_what_cannot_be(
     assert re.search(said, error)
     assert error.count("\n") == 1
     assert listing(tmp_path) == {}
+
+
+@pytest.mark.parametrize("command", ["mark", "look"])
+def test_a_folder_is_no_record(command: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]) -> None:
+    monkeypatch.chdir(tmp_path)
+    assert cli.main([command, ".", *(["--out", "o"] if command == "mark" else [])]) == 1
+    assert capsys.readouterr().err == "caval: . is a folder; name a record in it\n"
+    assert listing(tmp_path) == {}
