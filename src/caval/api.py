@@ -30,8 +30,8 @@ def read(path: str | Path) -> Recording:
         No such file, no format for it, or a broken file.
     """
     path = Path(path)
-    if path.is_dir():
-        raise FileError(f"{path} is a folder; name a record in it")
+    if path.is_dir() and not any(i.value.owns and i.value.owns(path.resolve()) for i in registry.formats().values()):
+        raise FileError(f"{path} is a folder; name a record in it")  # a folder may share its name with a record that has no ending
     reader = registry.format_for(path).read
     assert reader is not None  # format_for gives only formats that can
     return reader(path)
