@@ -525,3 +525,12 @@ def test_a_folder_is_no_record(command: str, tmp_path: Path, monkeypatch: pytest
     assert cli.main([command, ".", *(["--out", "o"] if command == "mark" else [])]) == 1
     assert capsys.readouterr().err == "caval: . is a folder; name a record in it\n"
     assert listing(tmp_path) == {}
+
+
+def test_demo_overwrites_only_what_a_demo_made(tmp_path: Path, edf: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    mine = tmp_path / "demo.edf"
+    mine.write_bytes(edf.read_bytes())
+    assert cli.main(["mark", str(mine), "--out", str(tmp_path), "-q"]) == 0
+    before = listing(tmp_path)
+    assert "demo.edf exists" in fails(capsys, tmp_path, "demo", "--out", tmp_path, "--minutes", "0.3")
+    assert listing(tmp_path) == before

@@ -52,6 +52,8 @@ def test_a_stretch_has_the_rows_of_the_whole(recording, whole):
     assert np.allclose(ours["time_s"], inner["time_s"], rtol=0, atol=1e-9)
     assert np.allclose(ours["pressure_mmhg"], inner["pressure_mmhg"], rtol=0, atol=1e-9)
     assert list(part.beats["beat"]) == list(range(len(part.beats)))
+    clipped = caval.tables.clip_spans(whole.spans, 130.0, 460.0)
+    assert np.allclose(part.spans[["onset_s", "duration_s"]], clipped[["onset_s", "duration_s"]])
 
 
 def test_lazy_and_loaded_channels_give_the_same_rows(recording, whole):
@@ -138,3 +140,21 @@ def test_a_short_record_is_a_stated_result_without_marks():
     result = caval.mark(sketch(minutes=2 / 60, events=False).recording)
     assert len(result.marks) == 0
     assert result.warnings
+
+
+def test_settings_reach_the_stage_that_stands_in(recording, monkeypatch):
+    heard = []
+
+    @registry.stage(name="their-quality", gives=("spans",))
+    def theirs(cvp, *, strictness=1.0):
+        assert cvp.unit == "mmHg"
+        heard.append(strictness)
+        return caval.tables.empty("spans")
+
+    installed = {**registry.stages(), "theirs": registry.Installed("theirs", theirs.__caval__, "their-package", "1.0", "their:theirs")}
+    monkeypatch.setattr(registry, "stages", lambda: installed)
+    result = caval.mark(recording, choose={"quality": "theirs"}, settings={"quality": {"strictness": 5.0}}, stop_s=30.0)
+    assert set(heard) == {5.0}
+    assert result.run["settings"]["quality"] == {"strictness": 5.0}
+    with pytest.raises(InputError, match="no setting 'nonsense'"):
+        caval.mark(recording, choose={"quality": "theirs"}, settings={"quality": {"nonsense": 5.0}}, stop_s=30.0)

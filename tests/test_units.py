@@ -40,7 +40,7 @@ def test_one_kilopascal_is_a_thousand_pascals_and_ten_hectopascals() -> None:
 @pytest.mark.parametrize(
     ("spelling", "unit"),
     [
-        ("mm Hg", "mmHg"), ("MMHG", "mmHg"), ("mm[Hg]", "mmHg"), ("mmHg ", "mmHg"), ("mm", "mmHg"), ("Torr", "mmHg"),
+        ("mm Hg", "mmHg"), ("MMHG", "mmHg"), ("mm[Hg]", "mmHg"), ("mmHg ", "mmHg"), ("Torr", "mmHg"),
         ("cmH₂O", "cmH2O"), ("cm H2O", "cmH2O"), ("cm[H2O]", "cmH2O"), ("KPA", "kPa"), ("mBar", "mbar"),
     ],
 )
@@ -60,3 +60,8 @@ def test_an_unknown_unit_is_an_error_that_names_channel_and_option(unit: str) ->
     assert all(name in said for name in PRESSURE_UNITS)
     assert isinstance(caught.value, CavalError)
     assert isinstance(caught.value, ValueError)
+
+
+def test_millimetres_alone_are_not_taken_for_a_pressure():
+    with pytest.raises(InputError, match="'mm'"):
+        mmhg_per_unit("mm", channel="CVP")

@@ -10,6 +10,7 @@ import pandas as pd
 from caval.errors import FileError
 from caval.recording import Recording
 from caval.track import Track
+from caval.vocabulary import WAVES, mark_text
 
 __all__ = ["read_csv_track", "write_csv_track"]
 
@@ -53,4 +54,6 @@ def read_csv_track(path: Path) -> Track:
     text = next((c for c in _TEXTS if c in rows), None) if time != "r_time_s" else None
     blank = np.full(len(rows), "R" if time == "r_time_s" else "", dtype=object)
     words = rows[text].astype(str).to_numpy(object) if text else blank
+    if text == "mark":
+        words = np.array([mark_text(w) if w in WAVES else w for w in words], dtype=object)  # our a is no WFDB beat letter
     return Track.build(onset[known], words[known], duration_s=lasts[known])

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import shutil
 import tempfile
-from collections.abc import Callable
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 
 from caval.errors import CavalError, FileError
@@ -13,7 +13,7 @@ from caval.errors import CavalError, FileError
 __all__ = ["write_all"]
 
 
-def write_all(directory: Path, make: Callable[[Path], object], *, force: bool = False, never: Path | None = None) -> list[Path]:
+def write_all(directory: Path, make: Callable[[Path], object], *, force: bool = False, never: Iterable[Path] = ()) -> list[Path]:
     """Let `make` write files into a hidden folder, then move all of them into `directory`, or none.
 
     Parameters
@@ -24,8 +24,8 @@ def write_all(directory: Path, make: Callable[[Path], object], *, force: bool = 
         Called with the hidden folder, which lies in `directory` so that moving is renaming.
     force : bool
         Overwrite files of the same names.
-    never : Path, optional
-        The input: it is not overwritten, not even with `force`.
+    never : paths
+        The input: none of it is overwritten, not even with `force`.
 
     Returns
     -------
@@ -37,19 +37,19 @@ def write_all(directory: Path, make: Callable[[Path], object], *, force: bool = 
     FileError
         A file is in the way, or one cannot be written.
     """
-    is_new = not directory.exists()
+    missing = [folder for folder in (directory, *directory.parents) if not folder.exists()]
     scratch: Path | None = None
     try:
         directory.mkdir(parents=True, exist_ok=True)
         scratch = Path(tempfile.mkdtemp(prefix=".caval-", dir=directory))
-        make(scratch)
-        made = sorted(scratch.iterdir())
-        targets = [directory / path.name for path in made]
-        for target in targets:
-            _check_free(target, force=force, never=never)
-        for source, target in zip(made, targets, strict=True):
-            os.replace(source, target)
-        return targets
+        (scratch / "new").mkdir()
+        (scratch / "old").mkdir()
+        make(scratch / "new")
+        made = sorted((scratch / "new").iterdir())
+        protected = [path for path in never if path.exists()]
+        for path in made:
+            _check_free(directory / path.name, force=force, never=protected)
+        return _move(made, directory, scratch / "old")
     except CavalError:
         raise
     except OSError as error:
@@ -57,14 +57,36 @@ def write_all(directory: Path, make: Callable[[Path], object], *, force: bool = 
     finally:
         if scratch is not None:
             shutil.rmtree(scratch, ignore_errors=True)
-        if is_new and directory.is_dir() and not any(directory.iterdir()):
-            directory.rmdir()
+        for folder in missing:
+            if folder.is_dir() and not any(folder.iterdir()):
+                folder.rmdir()
 
 
-def _check_free(target: Path, *, force: bool, never: Path | None) -> None:
+def _move(made: Sequence[Path], directory: Path, aside: Path) -> list[Path]:
+    """Move files into their places; when one cannot, those that gave way come back."""
+    placed: list[Path] = []
+    try:
+        for source in made:
+            target = directory / source.name
+            if target.exists():
+                os.replace(target, aside / source.name)
+            placed.append(target)
+            os.replace(source, target)
+    except BaseException:
+        for target in placed:
+            target.unlink(missing_ok=True)
+            if (aside / target.name).exists():
+                os.replace(aside / target.name, target)
+        raise
+    return placed
+
+
+def _check_free(target: Path, *, force: bool, never: Sequence[Path]) -> None:
     if not target.exists():
         return
-    if never is not None and never.exists() and target.samefile(never):
+    if not target.is_file():
+        raise FileError(f"{target} is in the way and is no file; remove it, or write to another folder")
+    if any(target.samefile(path) for path in never):
         raise FileError(f"{target} is the input, which is never overwritten; write to another folder")
     if not force:
         raise FileError(f"{target} exists; use --force to overwrite, or write to another folder")

@@ -66,7 +66,7 @@ def write(recording: Recording, path: str | Path, *, force: bool = False) -> tup
     path = Path(path)
     writer = registry.format_for(path, "write").write
     assert writer is not None
-    made = write_all(path.parent, lambda folder: writer(recording, folder / path.name), force=force, never=recording.path)
+    made = write_all(path.parent, lambda folder: writer(recording, folder / path.name), force=force, never=recording.files)
     return tuple(made)
 
 

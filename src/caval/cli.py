@@ -20,6 +20,8 @@ if TYPE_CHECKING:
 
 __all__ = ["CAUTION", "app", "main"]
 
+_DEMO_NOTE = "demo_readme.txt"
+"""Stands in a folder that `caval demo` made; only there does a later demo overwrite."""
 CAUTION = (
     "Caution: research software, not a medical device. It describes recordings; it neither diagnoses nor advises, and must not "
     "be used to monitor or treat a patient. Local protocols and licensed practice come first."
@@ -194,13 +196,16 @@ def look(
     record: Record,
     role: Roles = None,
     unit: Units = None,
+    quiet: Quiet = False,
     debug: Debug = False,
 ) -> None:
     """Show what a record holds: channels, rates, roles, gaps, value ranges, how much is usable, annotations."""
     from caval import api
     from caval._look import print_record
 
-    print_record(api.read(record), roles=_roles(role), unit_of=_units(unit))
+    recording = api.read(record)
+    if not quiet:
+        print_record(recording, roles=_roles(role), unit_of=_units(unit))
 
 
 @app.command(epilog=_epilog("caval convert record.edf record.hea", "caval convert 100s.hea 100s.edf"))
@@ -271,23 +276,21 @@ def demo(
     from caval.model.simulate import simulate as run
 
     record = out / "demo.edf"
-    if record.exists() and not (out / "demo_run.json").exists():
-        from caval.errors import FileError
-
-        raise FileError(f"{record} exists and is not of an earlier demo; choose another --out")
+    again = (out / _DEMO_NOTE).exists()
     with _progress(quiet) as progress:
         if progress is not None:
             progress("simulate", 0.0)
-        run("theatre", minutes=minutes).write(record, force=True)
+        run("theatre", minutes=minutes).write(record, force=again)
         result = api.mark(record, progress=progress)
-        written = result.write(out, table="csv", force=True)
+        written = result.write(out, table="csv", force=again)
+    (out / _DEMO_NOTE).write_text("Files called demo in this folder are made by `caval demo`, which overwrites them.\n", encoding="utf-8")
     _report(result, written, quiet=quiet)
     if not quiet:
         typer.echo(
             f"\nOpen {out / 'demo.png'}: ECG, venous and arterial pressure with every wave marked, the median beat, the trend.\n"
-            "The patient is a model, no person. Worth a look: the flush at 45 s and the zeroing at 90 s are named in\n"
-            f"{out / 'demo_spans.csv'} and carry no marks; the diathermy at 130 and 150 s costs no beat, because the arterial trace\n"
-            "shows it; the venous pressure rises with the fluid given from 170 s; from 300 s on the atrium fibrillates.\n"
+            "The patient is a model, no person. What happens, where the record is long enough: a flush at 45 s and the zeroing of the\n"
+            f"line at 90 s, which carry no marks ({out / 'demo_spans.csv'} has what was seen of them); diathermy at 130 and 150 s,\n"
+            "which costs no beat because the arterial trace shows it; fluid from 170 s; from 300 s on atrial fibrillation, where a is lost.\n"
             f"What is true of it stands in {out / 'demo_truth_marks.csv'}.\n"
             f"Next: caval look {record}, then caval mark YOUR_RECORD --out DIR"
         )
@@ -301,11 +304,12 @@ def _number(text: str) -> float | str:
 
 
 @app.command(epilog=_epilog("caval stages"))
-def stages(debug: Debug = False) -> None:
+def stages(quiet: Quiet = False, debug: Debug = False) -> None:
     """List the stages, detectors and formats that are installed, and which package each comes from."""
     from caval._look import print_installed
 
-    print_installed()
+    if not quiet:
+        print_installed()
 
 
 def _report(result: Result, written: Sequence[Path], *, quiet: bool) -> None:

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -122,7 +122,10 @@ class Pipeline:
         stretch = max(0.0, start_s - reach), min(end_s + reach, recording.duration_s)
         for stage in ordered:
             done |= self._run_stage(stage, signals, done, stretch, progress)
-        return {name: _within(name, table, start_s, end_s) for name, table in done.items()}
+        return {
+            name: tables.clip_spans(table, start_s, end_s) if name == "spans" else _within(name, table, start_s, end_s)
+            for name, table in done.items()
+        }
 
     def settings_used(self) -> dict[str, dict[str, Any]]:
         """Every setting of every stage that runs, the user's over the defaults."""
@@ -133,7 +136,7 @@ class Pipeline:
         """Stages in an order in which every need is met when its turn comes; those whose gift is given are left out."""
         installed = registry.stages()
         waiting = [self._candidates(roles)] if "beats" not in given else []
-        waiting += [registry.pick(installed, self.choose.get(name, name), "stage") for name in self.stages]
+        waiting += [replace(registry.pick(installed, self.choose.get(n, n), "stage"), name=n) for n in self.stages]
         waiting = [s for s in waiting if not set(s.gives) <= set(given)]
         have, ordered = set(given), []
         while waiting:

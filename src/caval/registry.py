@@ -204,6 +204,7 @@ def parse_setting(name: str, stage_: Stage, value: Any) -> Any:
     if name not in stage_.settings:
         raise InputError(f"stage {stage_.name!r} has no setting {name!r}; it has: {', '.join(stage_.settings) or 'none'}")
     default = stage_.settings[name]
-    if default is not None and not isinstance(value, type(default)) and not (isinstance(default, float) and isinstance(value, int)):
+    fits = isinstance(value, type(default)) or (isinstance(default, float) and isinstance(value, int))
+    if default is not None and (not fits or (isinstance(value, bool) and not isinstance(default, bool))):
         raise InputError(f"setting {stage_.name}.{name} = {value!r}: {type(default).__name__} expected (default {default!r})")
     return value

@@ -157,7 +157,7 @@ class Result:
                 self.plot().savefig(folder / f"{stem}.png")
             _write_json({**self.run, **_fingerprints(self.recording)}, folder / f"{stem}_run.json")
 
-        return write_all(directory, make, force=force, never=self.recording.path)
+        return write_all(directory, make, force=force, never=self.recording.files)
 
 
 def _statements(

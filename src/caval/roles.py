@@ -75,7 +75,7 @@ def assign_roles(recording: Recording, chosen: Mapping[str, str] | None = None, 
             if channel.label not in roles.values() and (rank := _rank(channel.label, role)) is not None
             and not (name == "ecg" and units.is_pressure_unit(channel.unit))
         ]
-        if name == "cvp" and len({recording.labels[i] for _, i in ranked}) > 1:
+        if name == "cvp" and len(ranked) > 1:
             if not required:
                 continue
             found = ", ".join(repr(recording.labels[i]) for _, i in ranked)

@@ -8,9 +8,10 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from caval.errors import InputError
 from caval.vocabulary import WAVES
 
-__all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "empty", "join_blocks", "overlaps", "time_column"]
+__all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "clip_spans", "empty", "join_blocks", "overlaps", "time_column"]
 
 SCHEMAS: dict[str, dict[str, str]] = {
     "candidates": {"time_s": "f8", "detector": "object"},
@@ -39,7 +40,11 @@ def empty(name: str) -> pd.DataFrame:
 
 def time_column(table: pd.DataFrame) -> str:
     """The column that says when a row is."""
-    return next(c for c in ("r_time_s", "onset_s", "time_s") if c in table.columns)
+    for column in ("r_time_s", "onset_s", "time_s"):
+        if column in table.columns:
+            return column
+    has = ", ".join(map(str, table.columns)) or "no column"
+    raise InputError(f"a table of a stage needs one of r_time_s, onset_s, time_s; it has: {has}")
 
 
 def join_blocks(name: str, parts: Sequence[tuple[float, float, pd.DataFrame]]) -> pd.DataFrame:
@@ -47,7 +52,7 @@ def join_blocks(name: str, parts: Sequence[tuple[float, float, pd.DataFrame]]) -
     kept = []
     for start_s, stop_s, rows in parts:
         if name == "spans":
-            kept.append(_clip(rows, start_s, stop_s))
+            kept.append(clip_spans(rows, start_s, stop_s))
         elif len(rows):
             time = rows[time_column(rows)]
             kept.append(rows[(time >= start_s) & (time < stop_s)])
@@ -71,7 +76,8 @@ def number_beats(beats: pd.DataFrame) -> pd.DataFrame:
     return beats
 
 
-def _clip(spans: pd.DataFrame, start_s: float, stop_s: float) -> pd.DataFrame:
+def clip_spans(spans: pd.DataFrame, start_s: float, stop_s: float) -> pd.DataFrame:
+    """What of the spans lies in ``[start_s, stop_s)``."""
     onset = spans["onset_s"].to_numpy(float)
     end = np.minimum(onset + spans["duration_s"].to_numpy(float), stop_s)
     onset = np.maximum(onset, start_s)

@@ -24,8 +24,7 @@ PRESSURE_UNITS: dict[str, float] = {
 }
 """mmHg in one of each unit."""
 
-_SPELLINGS = {name.lower(): name for name in PRESSURE_UNITS} | {"mm": "mmHg", "torr": "mmHg", "cmwater": "cmH2O"}
-# "mm" alone is what some WFDB headers keep of "mm Hg": the reader splits the header at the blank.
+_SPELLINGS = {name.lower(): name for name in PRESSURE_UNITS} | {"torr": "mmHg", "cmwater": "cmH2O"}
 
 
 def _key(unit: str) -> str:

@@ -12,7 +12,7 @@ import pytest
 
 import caval
 from caval.api import read_track
-from caval.errors import FileError
+from caval.errors import FileError, InputError
 from caval.track import Track
 from caval_table import BIDS, CSV
 from compliance import one_line, record, same_annotations, track
@@ -53,7 +53,10 @@ def test_any_table_with_a_column_of_times_holds_beats(tmp_path: Path, column: st
 def test_marks_of_a_table_of_marks(tmp_path: Path) -> None:
     path = tmp_path / "rec_marks.csv"
     path.write_text("time_s,mark,beat\n0.5,a,0\n0.6,c,0\n")
-    assert list(read_track(path).text) == ["a", "c"]
+    track = read_track(path)
+    assert list(track.text) == ["CVP/a", "CVP/c"]  # the bare letter a is a WFDB beat code
+    with pytest.raises(InputError):
+        track.beat_times_s()
 
 
 @pytest.mark.parametrize("content", ["", "a,b\n1,2\n", "time_s\nnoon\n", "time_s,text\n\"1.0\n"])

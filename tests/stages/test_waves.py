@@ -6,6 +6,7 @@ import pytest
 
 import caval
 from caval.agree import match_events
+from caval.model.simulate import simulate
 from caval.model.sketch import sketch
 from caval.recording import Recording
 from caval.vocabulary import STATES, WAVES
@@ -169,3 +170,41 @@ def test_detection_does_not_change_the_recording(truth):
     caval.mark(truth.recording)
     for channel, was in zip(truth.recording.channels, before, strict=True):
         assert np.array_equal(channel.digital(), was)
+
+
+@pytest.fixture(scope="module")
+def simulated():
+    return {name: simulate(name, minutes=1) for name in ("healthy", "fibrillation", "premature_beats", "tachycardia")}
+
+
+@pytest.mark.parametrize("name", ["healthy", "fibrillation", "premature_beats", "tachycardia"])
+def test_no_extremum_carries_two_marks_and_z_lies_before_c(simulated, name):
+    result = caval.mark(simulated[name].recording)
+    apart = np.diff(np.sort(result.marks["time_s"].to_numpy()))
+    assert (apart > 1e-6).all()
+    beats = result.beats
+    assert not (beats["z_time_s"] >= beats["c_time_s"]).any()
+    assert not (beats["z_time_s"] <= beats["a_time_s"]).any()
+    assert ((beats["c_time_s"] - beats["r_time_s"]).dropna() > 0).all()  # c comes after R
+
+
+def test_fibrillation_from_mechanics_has_no_a(simulated):
+    marks = caval.mark(simulated["fibrillation"].recording).marks
+    beats = len(simulated["fibrillation"].truth.rhythm.r_times_s)
+    assert (marks["mark"] == "a").sum() <= 0.02 * beats  # the truth has none
+
+
+def test_sinus_rhythm_from_mechanics_is_found_and_nothing_else(simulated):
+    made = simulated["healthy"]
+    marks = caval.mark(made.recording).marks
+    for wave in DRAWN:
+        truth = made.truth.marks.loc[(made.truth.marks["mark"] == wave) & made.truth.marks["time_s"].notna(), "time_s"]
+        agreement = match_events(np.sort(truth), _times(marks, wave), window_s=0.03)
+        assert agreement.sensitivity >= 0.95, wave  # beats at the edges lack a neighbour
+        assert agreement.precision >= 0.95, wave
+
+
+def test_a_and_c_that_run_together_in_tachycardia_are_called_fused(simulated):
+    marks = caval.mark(simulated["tachycardia"].recording).marks
+    a = marks[marks["mark"] == "a"]
+    assert (a["state"] == "fused").mean() > 0.5

@@ -337,7 +337,7 @@ def _checked(kind: str, settings: _Settings) -> tuple[RhythmKind, _Settings]:
         value = getattr(filled, name)
         if kind == "tachycardia" and name == "heart_rate":
             low, high = 100.0, 180.0
-        if not low <= value <= high:
+        if not isinstance(value, int | float) or not low <= value <= high:
             raise InputError(f"{name} = {value!r}: it must be between {low:g} and {high:g}{_UNITS.get(name, '')} in rhythm {kind!r}")
     conducts = kind in ("sinus", "tachycardia", "first_degree_block", "ventricular_premature", "atrial_premature")
     longest = 0.75 * 60.0 / heart_rate

@@ -84,8 +84,10 @@ def _picture(centre_s: float, grid_s: Floats, traces: Floats, interval_s: float)
     lag = round(0.04 / STEP_S)
     noise = 1.4826 * float(_median(np.abs(rest[:, lag:] - rest[:, :-lag]))) / 2.0**0.5
     span = float(np.ptp(median)) or 1e-9
+    quarters = np.nanpercentile(traces[:, inside], [25, 75], axis=0)
+    doubt = 1.2533 * (quarters[1] - quarters[0]) / 1.349 / len(traces) ** 0.5  # standard error of a median, by the normal law
     noise_of_median = noise / len(traces) ** 0.5
-    return Picture(centre_s, time, median, interval_s, span, noise, _places(time, median, interval_s, span, noise_of_median))
+    return Picture(centre_s, time, median, interval_s, span, noise, _places(time, median, interval_s, span, noise_of_median, doubt))
 
 
 def _median(values: Floats, axis: int | None = None) -> Floats:
@@ -93,7 +95,7 @@ def _median(values: Floats, axis: int | None = None) -> Floats:
     return np.asarray((np.nanmedian if np.isnan(values).any() else np.median)(values, axis=axis), dtype=np.float64)
 
 
-def _places(time: Floats, trace: Floats, interval: float, span: float, noise: float) -> dict[str, float]:
+def _places(time: Floats, trace: Floats, interval: float, span: float, noise: float, doubt: Floats) -> dict[str, float]:
     """Where the waves of a median beat are: the choice of extrema, in the order of waves, that fits height and common timing best.
 
     Timing (from R, through the line; common practice): a −0.06 s, c 0.11 s, x 0.235 s, v 0.47 s times the square root of the interval
@@ -104,7 +106,9 @@ def _places(time: Floats, trace: Floats, interval: float, span: float, noise: fl
     places = _systole(peaks, troughs, time, trace, interval, span)
     if "v" in places:
         peaks = peaks[np.abs(time[peaks] - (places["v"] - interval)) > 0.05]  # the v of the beat before is no a
-    tall = np.intersect1d(peaks, _prominent(trace, 1.0, max(0.03 * span, 4.0 * noise)))  # an atrium that rests must not get an a from noise
+    peaks_at, found = signal.find_peaks(trace, prominence=max(0.03 * span, 4.0 * noise))
+    sure = peaks_at[found["prominences"] > 4.0 * doubt[peaks_at]]  # where beats differ, as before R in fibrillation, ripples are no a
+    tall = np.intersect1d(peaks, sure)
     a = _best(tall, time, trace, span, (-0.28, min(0.06, places.get("x", 0.2) - 0.10)), -0.06, 0.08, 2.0)
     if a is not None:
         places["a"] = a

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import ndimage, signal
 
+from caval.errors import InputError
 from caval.recording import Signal
 
 __all__ = ["Thin", "bandpass", "cut", "fill", "grid", "lowpass", "moving_mean", "refine", "runs"]
@@ -35,14 +36,16 @@ def _butterworth(cut_hz: float | tuple[float, float], kind: str, sampling_rate: 
 
 def lowpass(values: Floats, sampling_rate: float, cut_hz: float) -> Floats:
     """Zero-phase Butterworth low-pass, fourth order in all; a copy when the rate is too low for the cut."""
+    if not cut_hz > 0:
+        raise InputError(f"low-pass at {cut_hz!r} Hz: a frequency above 0 is needed")
     if cut_hz >= 0.45 * sampling_rate or len(values) < 16:
         return values.copy()
     return signal.sosfiltfilt(_butterworth(cut_hz, "lowpass", sampling_rate), values)
 
 
 def bandpass(values: Floats, sampling_rate: float, low_hz: float, high_hz: float) -> Floats:
-    """Zero-phase Butterworth band-pass, fourth order in all."""
-    if len(values) < 32:
+    """Zero-phase Butterworth band-pass, fourth order in all; nothing when the rate is too low for the band."""
+    if len(values) < 32 or low_hz >= 0.4 * sampling_rate:
         return np.zeros_like(values)
     return signal.sosfiltfilt(_butterworth((low_hz, min(high_hz, 0.45 * sampling_rate)), "bandpass", sampling_rate), values)
 

@@ -30,6 +30,8 @@ _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.0
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
+_FAST_S = 0.5
+_TOGETHER_S = 0.10
 _PROMINENCE_WINDOW_S = 0.5
 _SHARPEN_S = 0.024
 _QUIET_MMHG = 0.15
@@ -80,10 +82,11 @@ def waves(
     found.seek("v", trace.peaks, found.r + 0.20, found.next_r - 0.08)
     found.seek("x", trace.troughs, found.r + 0.08, found.time["v"] - 0.05)
     found.seek("y", trace.troughs, found.time["v"] + 0.04, found.next_r)
-    found.seek("a", trace.peaks, found.r - 0.30, np.minimum(found.r + 0.10, found.time["x"] - 0.05))
+    found.seek("a", trace.peaks, np.fmax(found.r - 0.30, found.before()), np.minimum(found.r + 0.10, found.time["x"] - 0.05))
     found.seek("c", trace.peaks, np.fmax(found.r + 0.02, found.time["a"] + 0.04), found.time["x"] - 0.03)
     found.seek("h", trace.peaks, found.time["y"] + 0.08, found.next_r - 0.25)
     found.corner_c(smooth)
+    found.fuse_a(smooth)
     found.foot_z(trace, smooth, delay_s)
     found.sharpen(fine, values)
     return found.table(smooth, fine)
@@ -136,6 +139,11 @@ class _Found:
         self.confidence: dict[str, Floats] = {}
         self.state: dict[str, NDArray[np.object_]] = {}
 
+    def before(self) -> Floats:
+        """Where the waves of the beat before end, s: its y, else its v; NaN where neither was found."""
+        last = np.fmax(self.time["y"], self.time["v"] + 0.05)
+        return np.concatenate([[np.nan], last[:-1]])
+
     def place(self, wave: str) -> Floats:
         """Where the picture has the wave, seconds of the record, NaN where it has none."""
         return self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
@@ -185,13 +193,23 @@ class _Found:
         time = a[rows, None] + (x - a)[rows, None] * share
         level = smooth.at(time)
         above = level - (level[:, :1] + (level[:, -1:] - level[:, :1]) * share)
-        above[np.abs(time - place[rows, None]) > 2.5 * _REACH_S["c"]] = -np.inf
+        above[(np.abs(time - place[rows, None]) > 2.5 * _REACH_S["c"]) | (time < self.r[rows, None] + 0.02)] = -np.inf
         best = above.argmax(axis=1)
         height = above[np.arange(len(rows)), best]
         good = np.isfinite(height) & (height > 0.05 * self.span[rows])
         self.time["c"][rows[good]] = time[np.arange(len(rows)), best][good]
         self.state["c"][rows[good]] = "fused"
         self.confidence["c"][rows[good]] = 0.3
+
+    def fuse_a(self, smooth: Signal) -> None:
+        """Call an a fused that runs into c in a fast heart: 0.1 s apart or less, with a dip under a tenth of the beat's height."""
+        a, c = self.time["a"], self.time["c"]
+        rows = np.flatnonzero((c - a < _TOGETHER_S) & (self.next_r - self.r < _FAST_S))
+        if not len(rows):
+            return
+        level = smooth.at(a[rows, None] + (c - a)[rows, None] * np.linspace(0.0, 1.0, 21))
+        dip = np.minimum(level[:, 0], level[:, -1]) - level.min(axis=1)
+        self.state["a"][rows[dip < 0.1 * self.span[rows]]] = "fused"
 
     def foot_z(self, trace: _Trace, smooth: Signal, delay_s: float) -> None:
         """The lowest point between a and c; without one, the pressure at R plus the delay, called fused."""
@@ -202,7 +220,7 @@ class _Found:
         prominence = np.append(trace.troughs.prominence, np.nan)[first]
         has = self.usable & own_peak & (foot > a) & (foot < c)
         at_r = self.r + delay_s
-        readable = self.usable & np.isfinite(smooth.at(at_r))
+        readable = self.usable & np.isfinite(smooth.at(at_r)) & ~(at_r <= a) & ~(at_r >= c)  # the base of c lies before it
         self.time["z"] = np.where(has, foot, np.where(readable, at_r, np.nan))
         weak = prominence < np.maximum(_WEAK_MMHG, 2.0 * self.noise)
         self.state["z"] = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
