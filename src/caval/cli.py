@@ -290,7 +290,7 @@ def demo(
             f"\nOpen {out / 'demo.png'}: ECG, venous and arterial pressure with every wave marked, the median beat, the trend.\n"
             "The patient is a model, no person. What happens, where the record is long enough: a flush at 45 s and the zeroing of the\n"
             f"line at 90 s, which carry no marks ({out / 'demo_spans.csv'} has what was seen of them); diathermy at 130 and 150 s,\n"
-            "which costs no beat because the arterial trace shows it; fluid from 170 s; from 300 s on atrial fibrillation, where a is lost.\n"
+            "which costs no beat because the arterial trace shows it; fluid from 170 s; from 300 s on atrial fibrillation without a.\n"
             f"What is true of it stands in {out / 'demo_truth_marks.csv'}.\n"
             f"Next: caval look {record}, then caval mark YOUR_RECORD --out DIR"
         )
