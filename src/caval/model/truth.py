@@ -28,6 +28,8 @@ _LEAST_MMHG = 0.02
 """An extremum lower than this is none: the integrator's own ripple is a hundred times smaller."""
 _TENSION_S = 0.11
 """From the onset of P to an atrial tension half developed."""
+_EARLIEST_A_S = 0.065
+"""From the onset of P to the earliest top of an a; in a fast heart the v of the beat before stands just before that."""
 _SHUT = 0.1
 """Opening of the tricuspid valve, 0 to 1, below which a contraction in systole meets a shut one."""
 
@@ -47,10 +49,14 @@ class _Extrema:
         index = index[keep]
         return cls(refine(sign * trace, index) / rate, sign * trace[index], prominence[keep])
 
-    def highest(self, start_s: Floats, stop_s: Floats) -> NDArray[np.int64]:
-        """Index of the highest extremum of each interval, -1 where there is none."""
+    def highest(self, start_s: Floats, stop_s: Floats, but: NDArray[np.int64] | None = None) -> NDArray[np.int64]:
+        """Index of the highest extremum of each interval, -1 where there is none; those of `but` do not count."""
+        height = self.height.copy()
+        if but is not None:
+            height[but] = -np.inf
         first, last = np.searchsorted(self.time, start_s), np.searchsorted(self.time, stop_s)
-        return np.array([a + int(np.argmax(self.height[a:b])) if b > a else -1 for a, b in zip(first, last, strict=True)], dtype=np.int64)
+        best = [a + int(np.argmax(height[a:b])) if b > a else -1 for a, b in zip(first, last, strict=True)]
+        return np.array([k if k >= 0 and np.isfinite(height[k]) else -1 for k in best], dtype=np.int64)
 
 
 def wave_truth(
@@ -84,17 +90,18 @@ def wave_truth(
     opening = _opening(r, following, heart)
     r_seen, opens = r + delay_s, opening + delay_s
     p_next = _next(rhythm.p_times_s, opening) + delay_s
-    v = peaks.highest(r_seen + 0.20, opens + 0.06)
-    v_time = _time(peaks, v)
-    c = peaks.highest(r_seen + 0.045, np.fmin(r_seen + 0.15, v_time - 0.02))
+    tallest = _time(peaks, peaks.highest(r_seen + 0.20, opens + 0.06))
+    c = peaks.highest(r_seen + 0.045, np.fmin(r_seen + 0.15, tallest - 0.02))
     c_time = _time(peaks, c)  # 50 to 100 ms after R; before that the line still rings after a steep a
+    a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, heart, c)
+    v = peaks.highest(r_seen + 0.20, opens + 0.06, but=taken)  # one peak cannot be both: the atrium's is its own
+    v_time = _time(peaks, v)
     x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), r_seen, v_time))
     y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, p_next + 0.10), following + delay_s + 0.02))
     rows = [
         _rows("v", v, peaks, r, 1.0, opens), _rows("x", x, troughs, r, -1.0, r_seen + 0.22), _rows("y", y, troughs, r, -1.0, opens + 0.08),
     ]
-    a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, heart, c)
-    c = np.where(np.isin(c, taken), -1, c)  # one peak cannot be both: the atrium's is its own
+    c = np.where(np.isin(c, taken), -1, c)
     rows += [_rows("c", c, peaks, r, 1.0, r_seen + 0.08), a_rows]
     marks = pd.concat(rows, ignore_index=True)
     inside = marks["time_s"].isna() | marks["time_s"].between(0, len(trace) / rate)
@@ -155,12 +162,14 @@ def _atrial(
     r, p = rhythm.r_times_s, rhythm.p_times_s
     beat = np.searchsorted(r, p)
     p, beat = p[beat < len(r)], beat[beat < len(r)]
-    index = peaks.highest(p + delay_s + 0.05, p + delay_s + 0.20)
+    first, last = p + delay_s + _EARLIEST_A_S, p + delay_s + 0.20
+    index = peaks.highest(first, last)
     tense, valve = p + _TENSION_S, heart.openings["tricuspid"]
     systole = tense < np.append(opening, -np.inf)[np.searchsorted(r, tense) - 1]  # of the R before; the last place is for none
     shut = systole & (valve[np.clip(np.rint(tense * heart.rate).astype(np.int64), 0, len(valve) - 1)] < _SHUT)
     shared = (index >= 0) & np.isin(index, c) & ~shut
-    index = np.where(shared & (np.append(peaks.time, np.nan)[index] > p + delay_s + 0.16), -1, index)
+    own = peaks.highest(first, np.where(shared, _time(peaks, index) - 0.001, last))  # in a fast heart c, the taller, follows within the window
+    index = np.where(shared & ((own >= 0) | (_time(peaks, index) > p + delay_s + 0.16)), own, index)
     rows = _rows("a", index, peaks, p, 1.0, p + delay_s + 0.09)
     rows["beat"] = beat
     rows["detail"] = np.where(shut, "cannon", "")
