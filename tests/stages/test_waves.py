@@ -204,7 +204,11 @@ def test_sinus_rhythm_from_mechanics_is_found_and_nothing_else(simulated):
         assert agreement.precision >= 0.95, wave
 
 
-def test_a_and_c_that_run_together_in_tachycardia_are_called_fused(simulated):
-    marks = caval.mark(simulated["tachycardia"].recording).marks
-    a = marks[marks["mark"] == "a"]
-    assert (a["state"] == "fused").mean() > 0.5
+def test_a_and_c_that_lean_on_one_another_in_tachycardia_keep_their_names(simulated):
+    made = simulated["tachycardia"]
+    marks = caval.mark(made.recording).marks
+    for wave in ("a", "c"):
+        found = _times(marks[marks["state"] != "fused"], wave)
+        agreement = match_events(np.sort(made.truth.marks.loc[made.truth.marks["mark"] == wave, "time_s"].dropna()), found, window_s=0.03)
+        assert agreement.precision >= 0.98, wave  # the aim of the project for every rhythm
+

@@ -96,7 +96,7 @@ def wave_truth(
     a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, heart, c)
     v = peaks.highest(r_seen + 0.20, opens + 0.06, but=taken)  # one peak cannot be both: the atrium's is its own
     v_time = _time(peaks, v)
-    x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), r_seen, v_time))
+    x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), opens, v_time))
     y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, p_next + 0.10), following + delay_s + 0.02))
     rows = [
         _rows("v", v, peaks, r, 1.0, opens), _rows("x", x, troughs, r, -1.0, r_seen + 0.22), _rows("y", y, troughs, r, -1.0, opens + 0.08),
@@ -168,7 +168,7 @@ def _atrial(
     systole = tense < np.append(opening, -np.inf)[np.searchsorted(r, tense) - 1]  # of the R before; the last place is for none
     shut = systole & (valve[np.clip(np.rint(tense * heart.rate).astype(np.int64), 0, len(valve) - 1)] < _SHUT)
     shared = (index >= 0) & np.isin(index, c) & ~shut
-    own = peaks.highest(first, np.where(shared, _time(peaks, index) - 0.001, last))  # in a fast heart c, the taller, follows within the window
+    own = peaks.highest(first, np.where(shared, _time(peaks, index) - 0.001, last))  # in a fast heart the taller c follows soon
     index = np.where(shared & ((own >= 0) | (_time(peaks, index) > p + delay_s + 0.16)), own, index)
     rows = _rows("a", index, peaks, p, 1.0, p + delay_s + 0.09)
     rows["beat"] = beat

@@ -1,8 +1,9 @@
 """The a, z, c, x, v, y and h of every beat.
 
 A running picture of the cardiac cycle (the median of the R-aligned beats of the two minutes around, on a fixed grid) says where each wave
-is to be expected; the single beat decides. A mark stands on an extremum of the beat's own trace; where c has run into the slope
-between a and x it is the corner of that slope and called fused; where nothing is, nothing is marked.
+is to be expected; the single beat decides. The a is sought after its P, wherever that falls, and before R where no P is known. A mark
+stands on an extremum of the beat's own trace; where c has run into the slope between a and x it is the corner of that slope and called
+fused; where nothing is, or nothing that has a place, nothing is marked.
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
 from caval.stages._picture import Picture, running_pictures
-from caval.stages._signal import cut, fill, lowpass, refine
+from caval.stages._signal import fill, lowpass, moving_mean, refine
 from caval.stages._usable import usable_beats
 from caval.vocabulary import WAVES
 
@@ -28,21 +29,35 @@ Floats = NDArray[np.float64]
 
 _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.070}
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
+_REACH_AFTER_P_S = 0.032
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
-_FAST_S = 0.5
-_TOGETHER_S = 0.10
+_INTO_NEXT_S = 0.12
+"""How far past the next R v and y may stand: in a fast heart, through a line, they do."""
 _PROMINENCE_WINDOW_S = 0.5
+_QUIET_MMHG, _LOUD_MMHG = 0.10, 0.20
+"""Noise of the samples up to which a stretch is read off the finer trace, and from which off the smoother one."""
 _SHARPEN_S = 0.024
-_QUIET_MMHG = 0.15
-"""Noise of the samples (from their third differences, in which no wave is left) up to which a beat is read off the finer trace."""
+_NOISE_STEP_S, _NOISE_CELL_S = 0.008, 10.0
 _WEAK_MMHG = 0.12
 """An extremum lower than this, or than twice the noise, is weak."""
+_BEND_S = 0.05
+_NO_PLACE = 1.2
+"""Bend over 50 ms either way, in noises of the samples in the waves' band, below which the noise moves the top of a wave by more than 30 ms
+(a parabola through three points: SD of its top = h·noise/(√2·bend)): it has no place and is not marked."""
 
 
 @stage(name="waves", gives=("marks",), margin_s=150.0)
 def waves(
-    cvp: Signal, beats: pd.DataFrame, spans: pd.DataFrame, *, smooth_hz: float = 12.0, fine_hz: float = 20.0, delay_s: float = 0.03
+    cvp: Signal,
+    beats: pd.DataFrame,
+    spans: pd.DataFrame,
+    atria: pd.DataFrame | None = None,
+    coupling: pd.DataFrame | None = None,
+    *,
+    smooth_hz: float = 12.0,
+    fine_hz: float = 20.0,
+    delay_s: float = 0.03,
 ) -> pd.DataFrame:
     """Mark the waves of every usable beat.
 
@@ -52,11 +67,13 @@ def waves(
         Venous pressure, mmHg.
     beats, spans : DataFrame
         As the anchors and quality stages give them.
+    atria, coupling : DataFrame, optional
+        P waves, and what the ECG shows of the atria of each beat, as the atrial stage gives them. Without them a is sought at a fixed place
+        before R.
     smooth_hz : float
-        Waves are found after a zero-phase low-pass at this frequency.
+        Broad waves (x, v, y, h), and all where the trace is noisy, are found after a zero-phase low-pass at this frequency.
     fine_hz : float
-        Where the beat's noise allows it, the place of an extremum is that on the trace low-passed at this higher frequency: a wave with
-        one steep side, such as v, has its top nearer to that side than the smoother trace shows.
+        Where the noise allows it, narrow waves (a, c) are found, and all are placed, on the trace low-passed at this higher frequency.
     delay_s : float
         Line and monitor delay with which z is read when there is no foot between a and c: the pressure at R plus this.
 
@@ -64,201 +81,288 @@ def waves(
     -------
     DataFrame
         ``time_s, mark, beat, pressure_mmhg, confidence, state``, in time order. Times are those of the channel as recorded; pressures
-        are those of the low-passed trace.
+        are those of the low-passed trace. An a has the number of the R that follows its P; several may stand between two R.
     """
     if not len(beats) or len(cvp) < 2 * cvp.sampling_rate:
         return tables.empty("marks")
     values, missing = fill(cvp.values)
     if missing.all():
         return tables.empty("marks")
-    smooth = Signal(lowpass(values, cvp.sampling_rate, smooth_hz), cvp.sampling_rate, cvp.start_s, cvp.label, cvp.unit)
+    smooth, read = _traces(cvp, values, smooth_hz, fine_hz)
     usable, _ = usable_beats(cvp, beats, spans)
-    pictures = running_pictures(smooth, beats, usable)
+    pictures = running_pictures(read, beats, usable, atria, coupling)
     if not pictures:
         return tables.empty("marks")
-    fine = Signal(lowpass(values, cvp.sampling_rate, fine_hz), cvp.sampling_rate, cvp.start_s, cvp.label, cvp.unit)
-    trace = _Trace.of(smooth)
-    found = _Found(beats, usable, pictures)
-    found.seek("v", trace.peaks, found.r + 0.20, found.next_r - 0.08)
-    found.seek("x", trace.troughs, found.r + 0.08, found.time["v"] - 0.05)
-    found.seek("y", trace.troughs, found.time["v"] + 0.04, found.next_r)
-    found.seek("a", trace.peaks, np.fmax(found.r - 0.30, found.before()), np.minimum(found.r + 0.10, found.time["x"] - 0.05))
-    found.seek("c", trace.peaks, np.fmax(found.r + 0.02, found.time["a"] + 0.04), found.time["x"] - 0.03)
-    found.seek("h", trace.peaks, found.time["y"] + 0.08, found.next_r - 0.25)
-    found.corner_c(smooth)
-    found.fuse_a(smooth)
-    found.foot_z(trace, smooth, delay_s)
-    found.sharpen(fine, values)
-    return found.table(smooth, fine)
+    found = _Found(read, beats, usable, pictures)
+    sharp = {sign: _Extrema.of(read, sign) for sign in (1.0, -1.0)}
+    broad = {sign: _Extrema.of(smooth, sign) for sign in (1.0, -1.0)}
+    r, next_r, last = found.r, found.next_r, found.next_r + _INTO_NEXT_S
+    of_p = found.seek_after_p(sharp[1.0], atria)
+    broad[1.0].take_near(of_p.time)  # one extremum carries one mark
+    found.seek("v", broad[1.0], r + 0.16, last)
+    found.seek("x", broad[-1.0], r + 0.06, found.time("v") - 0.05)
+    found.seek("y", broad[-1.0], found.time("v") + 0.04, last)
+    for wave in "xvy":
+        found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
+    bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + 0.18, found.time("x") - 0.05)
+    found.seek("a", sharp[1.0], *bounds, rows=found.without_p(coupling))
+    found.join("a", of_p)
+    broad[1.0].take_near(found.time("a"))
+    found.seek("c", sharp[1.0], np.fmax(r + 0.02, found.time("a") + 0.04), np.fmin(found.time("x"), found.time("v") - 0.05) - 0.02)
+    found.seek("h", broad[1.0], found.time("y") + 0.08, next_r - 0.25)
+    found.corner_c()
+    found.foot_z(sharp[-1.0], delay_s)
+    return found.table()
 
 
-@dataclass(frozen=True, eq=False)
+def _traces(cvp: Signal, values: Floats, smooth_hz: float, fine_hz: float) -> tuple[Signal, Signal]:
+    """The trace on which broad waves are sought, low-passed at `smooth_hz`, and that on which narrow ones are sought and all are read.
+
+    The second is low-passed at `fine_hz` where it is quiet, at `smooth_hz` where it is not, and blended between.
+
+    The noise is that of the third differences over steps of 8 ms, in which no wave is left, in cells of a fixed grid.
+    """
+    rate = cvp.sampling_rate
+    smooth, fine = lowpass(values, rate, smooth_hz), lowpass(values, rate, fine_hz)
+    centres, noise = _noise(cvp, values)
+    quiet = np.clip((_LOUD_MMHG - noise) / (_LOUD_MMHG - _QUIET_MMHG), 0.0, 1.0)
+    share = np.interp(cvp.start_s + np.arange(len(values)) / rate, centres, quiet)
+    traces = (smooth, smooth + share * (fine - smooth))
+    broad, narrow = (Signal(trace, rate, cvp.start_s, cvp.label, cvp.unit) for trace in traces)
+    return broad, narrow
+
+
+def _noise(cvp: Signal, values: Floats) -> tuple[Floats, Floats]:
+    """Centres of the cells (s) and the SD of the samples' noise in them (mmHg), samples taken 8 ms apart."""
+    step = max(1, round(_NOISE_STEP_S * cvp.sampling_rate))
+    first = -round(cvp.start_s * cvp.sampling_rate) % step
+    steady = np.abs(np.diff(moving_mean(values, step)[first::step], 3))
+    time = cvp.start_s + (first + step * (np.arange(len(steady)) + 1.5)) / cvp.sampling_rate
+    cells = np.floor(time / _NOISE_CELL_S).astype(np.int64)
+    edges = np.flatnonzero(np.diff(cells, prepend=cells[0] - 1)) if len(cells) else np.empty(0, np.int64)
+    noise = np.array([np.median(part) for part in np.split(steady, edges[1:])]) * 1.4826 / 20.0**0.5
+    return (cells[edges] + 0.5) * _NOISE_CELL_S, noise
+
+
+@dataclass(eq=False)
 class _Extrema:
-    """All peaks, or all troughs, of a trace in time order: time (s), height (sign times mmHg), prominence (mmHg)."""
+    """All peaks, or all troughs, of a trace in time order: time (s), height (sign times mmHg), prominence (mmHg), and which are taken."""
 
-    sign: float
     time: Floats
     height: Floats
     prominence: Floats
-
-
-@dataclass(frozen=True, eq=False)
-class _Trace:
-    peaks: _Extrema
-    troughs: _Extrema
+    taken: NDArray[np.bool_]
 
     @classmethod
-    def of(cls, smooth: Signal) -> _Trace:
-        return cls(cls._extrema(smooth, 1.0), cls._extrema(smooth, -1.0))
-
-    @staticmethod
-    def _extrema(smooth: Signal, sign: float) -> _Extrema:
+    def of(cls, smooth: Signal, sign: float) -> _Extrema:
         heights = sign * smooth.values
         window = round(_PROMINENCE_WINDOW_S * smooth.sampling_rate) | 1
         index, _ = signal.find_peaks(heights, plateau_size=(1, window // 2))  # a longer plateau is a stuck trace, no wave
         prominence = signal.peak_prominences(heights, index, wlen=window)[0] if len(index) else np.empty(0)
         time = smooth.start_s + refine(heights, index) / smooth.sampling_rate
-        return _Extrema(sign, time, heights[index], prominence)
+        return cls(time, heights[index], prominence, np.zeros(len(index), dtype=bool))
+
+    def nearest(self, time: Floats) -> Floats:
+        """Time of the extremum nearest to each time, NaN for NaN."""
+        if not len(self.time):
+            return np.full(len(time), np.nan)
+        right = np.minimum(np.searchsorted(self.time, time), len(self.time) - 1)
+        left = np.maximum(right - 1, 0)
+        near = np.where(time - self.time[left] < self.time[right] - time, self.time[left], self.time[right])
+        return np.where(np.isfinite(time), near, np.nan)
+
+    def take_near(self, time: Floats) -> None:
+        """Take the extrema that lie at some times, as found on a finer trace."""
+        near = self.nearest(time)
+        self.taken |= np.isin(self.time, near[np.abs(near - time) <= _SHARPEN_S])
+
+    def around(self, start: Floats, most: int = 8) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+        """The `most` extrema from each start on, shape (n, most), and which of these exist and are free."""
+        index = np.searchsorted(self.time, start)[:, None] + np.arange(most)
+        there = index < len(self.time)
+        index = np.minimum(index, max(0, len(self.time) - 1))
+        return index, there & ~self.taken[index] if len(self.time) else there
+
+
+@dataclass(frozen=True, eq=False)
+class _Hits:
+    """Marks of one kind as columns; `time` is NaN where nothing was found."""
+
+    beat: NDArray[np.int64]
+    time: Floats
+    confidence: Floats
+    state: NDArray[np.object_]
+
+    @classmethod
+    def none(cls) -> _Hits:
+        return cls(np.empty(0, np.int64), np.empty(0), np.empty(0), np.empty(0, object))
+
+    def only(self, rows: NDArray) -> _Hits:
+        return _Hits(self.beat[rows], self.time[rows], self.confidence[rows], self.state[rows])
 
 
 class _Found:
-    """The waves of all beats as columns, filled wave by wave. Times are NaN where a wave is not found."""
+    """The waves of all beats, filled wave by wave. Row i of a wave's hits is that of beat i, but an a may have further rows."""
 
-    def __init__(self, beats: pd.DataFrame, usable: NDArray[np.bool_], pictures: list[Picture]) -> None:
+    def __init__(self, read: Signal, beats: pd.DataFrame, usable: NDArray[np.bool_], pictures: list[Picture]) -> None:
+        self.read = read
         self.r = beats["r_time_s"].to_numpy(float)
         self.beat = beats["beat"].to_numpy(np.int64)
         self.next_r = np.append(self.r[1:], np.inf)
         self.pictures = pictures
-        away = np.abs(self.r[:, None] - np.array([p.centre_s for p in pictures]))
-        self.which = away.argmin(axis=1)
-        self.usable = usable & (away.min(axis=1) <= _FARTHEST_S)
-        self.noise = np.array([p.noise_mmhg for p in pictures])[self.which]
-        self.span = np.array([p.span_mmhg for p in pictures])[self.which]
-        self.fine = np.zeros(len(self.r), dtype=bool)
-        self.time: dict[str, Floats] = {}
-        self.confidence: dict[str, Floats] = {}
-        self.state: dict[str, NDArray[np.object_]] = {}
+        self.centres = np.array([p.centre_s for p in pictures])
+        self.which = self._picture_of(self.r)
+        self.usable = usable & (np.abs(self.r - self.centres[self.which]) <= _FARTHEST_S)
+        self.noise = np.array([p.noise_mmhg for p in pictures])
+        self.span = np.array([p.span_mmhg for p in pictures])
+        self.hits: dict[str, _Hits] = {}
+        self.of_beat: dict[str, Floats] = {}
+
+    def _picture_of(self, time: Floats) -> NDArray[np.int64]:
+        """The nearest picture's index, of two equally near the earlier."""
+        right = np.clip(np.searchsorted(self.centres, time), 1, max(1, len(self.centres) - 1))
+        right = np.minimum(right, len(self.centres) - 1)
+        left = np.maximum(right - 1, 0)
+        return np.where(np.abs(time - self.centres[left]) <= np.abs(time - self.centres[right]), left, right)
+
+    def time(self, wave: str) -> Floats:
+        """Time of the wave of each beat, s, NaN where it was not found."""
+        return self.of_beat[wave]
 
     def before(self) -> Floats:
         """Where the waves of the beat before end, s: its y, else its v; NaN where neither was found."""
-        last = np.fmax(self.time["y"], self.time["v"] + 0.05)
+        last = np.fmax(self.time("y"), self.time("v") + 0.05)
         return np.concatenate([[np.nan], last[:-1]])
 
-    def place(self, wave: str) -> Floats:
-        """Where the picture has the wave, seconds of the record, NaN where it has none."""
-        return self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
+    def seek(self, wave: str, extrema: _Extrema, earliest: Floats, latest: Floats, rows: NDArray[np.bool_] | None = None) -> None:
+        """Find a wave of each beat near its place in the picture, between two bounds; NaN bounds do not bind."""
+        place = self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
+        sought = self.usable if rows is None else self.usable & rows
+        hits = self._choose(extrema, np.where(sought, place, np.nan), _REACH_S[wave], earliest, latest, self.which, self.beat)
+        self.hits[wave] = hits
+        self.of_beat[wave] = hits.time.copy()
 
-    def seek(self, wave: str, extrema: _Extrema, earliest: Floats, latest: Floats) -> None:
-        """Choose for each beat the extremum that stands out most and lies nearest to the wave's place in the picture.
+    def seek_after_p(self, peaks: _Extrema, atria: pd.DataFrame | None) -> _Hits:
+        """The a after each P that the ECG shows or the pace of the atria places."""
+        if atria is None or not len(atria):
+            return _Hits.none()
+        p = atria["time_s"].to_numpy(float)
+        which = self._picture_of(p)
+        place = p + np.array([picture.p_to_a_s for picture in self.pictures])[which]
+        follows = np.searchsorted(self.beat, atria["beat"].to_numpy(np.int64))
+        within = np.searchsorted(self.r, np.nan_to_num(place)) - 1
+        known = follows < len(self.r)
+        sound = known & self.usable[np.minimum(follows, len(self.r) - 1)] & self.usable[np.maximum(within, 0)]
+        sound &= np.abs(p - self.centres[which]) <= _FARTHEST_S
+        free = np.full(len(p), np.nan)
+        beat = self.beat[np.minimum(follows, len(self.r) - 1)]
+        return self._choose(peaks, np.where(sound, place, np.nan), _REACH_AFTER_P_S, free, free, which, beat)
 
-        NaN bounds (a neighbour that was not found) do not bind.
-        """
-        reach = _REACH_S[wave]
-        place = self.place(wave)
-        low = np.fmax(place - 2.5 * reach, earliest)
-        high = np.fmin(place + 2.5 * reach, latest)
-        sought = self.usable & np.isfinite(place) & (low < high)
-        first = np.searchsorted(extrema.time, np.where(sought, low, np.inf))
-        index = first[:, None] + np.arange(8)
-        inside = index < len(extrema.time)
-        index = np.minimum(index, max(0, len(extrema.time) - 1))
+    def without_p(self, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
+        """Beats whose a is to be sought at a fixed place from R: those of whose atria the ECG says nothing, and those that have none."""
+        if coupling is None or not len(coupling):
+            return np.ones(len(self.r), dtype=bool)
+        state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).fillna("unknown").to_numpy(object)
+        lone = np.array([p.atrial == "absent" for p in self.pictures])[self.which]  # there the picture has an a only if it is a cannon
+        return (state == "unknown") | ((state == "absent") & lone)
+
+    def join(self, wave: str, more: _Hits) -> None:
+        """Add marks to those of a wave; the last before R stands for the beat."""
+        found = more.only(np.isfinite(more.time))
+        mine = self.hits[wave]
+        row = np.searchsorted(self.beat, found.beat)
+        self.of_beat[wave][row] = np.fmax(found.time, self.of_beat[wave][row])  # rows in time order: the last assignment is the latest
+        mine = mine.only(np.isfinite(mine.time))
+        columns = [np.concatenate([getattr(mine, c), getattr(found, c)]) for c in ("beat", "time", "confidence", "state")]
+        self.hits[wave] = _Hits(*columns)
+
+    def _choose(
+        self, extrema: _Extrema, place: Floats, reach: float, earliest: Floats, latest: Floats, which: NDArray, beat: NDArray
+    ) -> _Hits:
+        """Of the free extrema within 2.5 `reach` of each place and within the bounds, the one that stands out most and lies nearest."""
+        span, noise = self.span[which], self.noise[which]
+        low, high = np.fmax(place - 2.5 * reach, earliest), np.fmin(place + 2.5 * reach, latest)
+        sought = np.isfinite(place) & (low < high)
+        blank = np.full(len(place), np.nan)
         if not len(extrema.time):
-            inside[:] = False
-            index = np.zeros_like(index)
-            time = height = prominence = np.full(index.shape, np.nan)
-        else:
-            time, height, prominence = (c[index] for c in (extrema.time, extrema.height, extrema.prominence))
-        inside &= time <= np.where(sought, high, -np.inf)[:, None]
+            return _Hits(beat, blank, blank.copy(), np.full(len(place), "clear", dtype=object))
+        index, free = extrema.around(np.where(sought, low, np.inf))
+        time, height, prominence = (c[index] for c in (extrema.time, extrema.height, extrema.prominence))
+        inside = free & (time <= np.where(sought, high, -np.inf)[:, None])
         off = (time - place[:, None]) / reach
-        stands = np.minimum(prominence / (0.3 * self.span[:, None]), 1.0)
-        score = np.where(inside, stands + 2.5 * height / self.span[:, None] - 0.5 * off**2, -np.inf)
+        stands = np.minimum(prominence / (0.3 * span[:, None]), 1.0)
+        score = np.where(inside, stands + 2.5 * height / span[:, None] - 0.5 * off**2, -np.inf)
+        rows = np.arange(len(place))
         best = score.argmax(axis=1)
-        rows = np.arange(len(best))
         hit = inside[rows, best]
-        self.time[wave] = np.where(hit, time[rows, best], np.nan)
+        hit &= _first(index[rows, best], score[rows, best], hit)
+        extrema.taken[index[rows, best][hit]] = True
         rise = prominence[rows, best]
-        weak = rise < np.maximum(_WEAK_MMHG, 2.0 * self.noise)
-        self.state[wave] = np.where(weak, "weak", "clear").astype(object)
-        clarity = rise / (rise + 2.0 * self.noise + 0.05)
-        self.confidence[wave] = np.where(hit, clarity * np.exp(-0.125 * off[rows, best] ** 2), np.nan)
+        weak = rise < np.maximum(_WEAK_MMHG, 2.0 * noise)
+        clarity = rise / (rise + 2.0 * noise + 0.05)
+        confidence = np.where(hit, clarity * np.exp(-0.125 * off[rows, best] ** 2), np.nan)
+        return _Hits(beat, np.where(hit, time[rows, best], np.nan), confidence, np.where(weak, "weak", "clear").astype(object))
 
-    def corner_c(self, smooth: Signal) -> None:
+    def sharpen(self, wave: str, sharp: _Extrema) -> None:
+        """Move a broad wave to the free extremum of the finer trace nearest to it, 24 ms at most.
+
+        A wave with one steep side, such as v, has its top nearer to that side than the smoother trace shows.
+        """
+        time = self.hits[wave].time
+        near = sharp.nearest(time)
+        close = np.abs(near - time) <= _SHARPEN_S
+        time[close] = self.of_beat[wave][close] = near[close]
+        sharp.taken |= np.isin(sharp.time, near[close])
+
+    def corner_c(self) -> None:
         """Where c has no peak between a and x but the picture has c: the corner of the slope, the point farthest above the line a–x."""
-        a, x, place = self.time["a"], self.time["x"], self.place("c")
-        lack = self.usable & np.isnan(self.time["c"]) & np.isfinite(a) & np.isfinite(x) & np.isfinite(place)
-        rows = np.flatnonzero(lack)
+        a, x, hits = self.time("a"), self.time("x"), self.hits["c"]
+        place = self.r + np.array([p.places.get("c", np.nan) for p in self.pictures])[self.which]
+        rows = np.flatnonzero(self.usable & np.isnan(hits.time) & np.isfinite(a) & np.isfinite(x) & np.isfinite(place))
         if not len(rows):
             return
         share = np.linspace(0.0, 1.0, 41)
         time = a[rows, None] + (x - a)[rows, None] * share
-        level = smooth.at(time)
+        level = self.read.at(time)
         above = level - (level[:, :1] + (level[:, -1:] - level[:, :1]) * share)
         above[(np.abs(time - place[rows, None]) > 2.5 * _REACH_S["c"]) | (time < self.r[rows, None] + 0.02)] = -np.inf
         best = above.argmax(axis=1)
         height = above[np.arange(len(rows)), best]
-        good = np.isfinite(height) & (height > 0.05 * self.span[rows])
-        self.time["c"][rows[good]] = time[np.arange(len(rows)), best][good]
-        self.state["c"][rows[good]] = "fused"
-        self.confidence["c"][rows[good]] = 0.3
+        good = np.isfinite(height) & (height > 0.05 * self.span[self.which][rows])
+        hits.time[rows[good]] = self.of_beat["c"][rows[good]] = time[np.arange(len(rows)), best][good]
+        hits.state[rows[good]] = "fused"
+        hits.confidence[rows[good]] = 0.3
 
-    def fuse_a(self, smooth: Signal) -> None:
-        """Call an a fused that runs into c in a fast heart: 0.1 s apart or less, with a dip under a tenth of the beat's height."""
-        a, c = self.time["a"], self.time["c"]
-        rows = np.flatnonzero((c - a < _TOGETHER_S) & (self.next_r - self.r < _FAST_S))
-        if not len(rows):
-            return
-        level = smooth.at(a[rows, None] + (c - a)[rows, None] * np.linspace(0.0, 1.0, 21))
-        dip = np.minimum(level[:, 0], level[:, -1]) - level.min(axis=1)
-        self.state["a"][rows[dip < 0.1 * self.span[rows]]] = "fused"
-
-    def foot_z(self, trace: _Trace, smooth: Signal, delay_s: float) -> None:
+    def foot_z(self, troughs: _Extrema, delay_s: float) -> None:
         """The lowest point between a and c; without one, the pressure at R plus the delay, called fused."""
-        a, c = self.time["a"], self.time["c"]
-        own_peak = self.state["c"] != "fused"
-        first = np.searchsorted(trace.troughs.time, np.where(np.isfinite(a), a, np.inf))
-        foot = np.append(trace.troughs.time, np.nan)[first]
-        prominence = np.append(trace.troughs.prominence, np.nan)[first]
+        a, c, noise = self.time("a"), self.time("c"), self.noise[self.which]
+        own_peak = self.hits["c"].state != "fused"
+        first = np.searchsorted(troughs.time, np.where(np.isfinite(a), a, np.inf))
+        foot = np.append(troughs.time, np.nan)[first]
+        prominence = np.append(troughs.prominence, np.nan)[first]
         has = self.usable & own_peak & (foot > a) & (foot < c)
         at_r = self.r + delay_s
-        readable = self.usable & np.isfinite(smooth.at(at_r)) & ~(at_r <= a) & ~(at_r >= c)  # the base of c lies before it
-        self.time["z"] = np.where(has, foot, np.where(readable, at_r, np.nan))
-        weak = prominence < np.maximum(_WEAK_MMHG, 2.0 * self.noise)
-        self.state["z"] = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
-        self.confidence["z"] = np.where(has, np.fmin(self.confidence["a"], self.confidence["c"]), 0.5)
+        readable = self.usable & np.isfinite(self.read.at(at_r)) & ~(at_r <= a) & ~(at_r >= c)  # the base of c lies before it
+        weak = prominence < np.maximum(_WEAK_MMHG, 2.0 * noise)
+        state = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
+        confidence = np.where(has, self.hits["c"].confidence, 0.5)
+        self.hits["z"] = _Hits(self.beat, np.where(has, foot, np.where(readable, at_r, np.nan)), confidence, state)
 
-    def sharpen(self, fine: Signal, raw: Floats) -> None:
-        """Move the extrema of quiet beats to the nearest of the finer trace, 24 ms at most."""
-        window = cut(raw, np.rint(fine.position(self.r - 0.3)).astype(int), round(fine.sampling_rate))
-        noise = 1.4826 * np.median(np.abs(np.diff(window, 3, axis=1)), axis=1) / 20.0**0.5
-        self.fine = noise < _QUIET_MMHG
-        of_fine = _Trace.of(fine)
-        for wave, time in self.time.items():
-            rows = np.flatnonzero(np.isfinite(time) & self.fine & (self.state[wave] != "fused"))
-            extrema = of_fine.peaks if WAVES[wave].is_peak else of_fine.troughs
-            if not len(rows) or len(extrema.time) < 2:
-                continue
-            right = np.clip(np.searchsorted(extrema.time, time[rows]), 1, len(extrema.time) - 1)
-            near = np.where(time[rows] - extrema.time[right - 1] < extrema.time[right] - time[rows], right - 1, right)
-            close = np.abs(extrema.time[near] - time[rows]) <= _SHARPEN_S
-            time[rows[close]] = extrema.time[near[close]]
-
-    def table(self, smooth: Signal, fine: Signal) -> pd.DataFrame:
-        """The marks table; pressures are those of the trace on which a mark was placed."""
+    def table(self) -> pd.DataFrame:
+        """The marks table."""
         parts = []
-        for wave, time in self.time.items():
-            rows = np.flatnonzero(np.isfinite(time))
-            on_fine = self.fine[rows] & (self.state[wave][rows] != "fused")
-            parts.append(
-                pd.DataFrame(
-                    {
-                        "time_s": time[rows],
-                        "mark": wave,
-                        "beat": self.beat[rows],
-                        "pressure_mmhg": np.where(on_fine, fine.at(time[rows]), smooth.at(time[rows])),
-                        "confidence": self.confidence[wave][rows],
-                        "state": self.state[wave][rows],
-                    }
-                )
-            )
+        for wave, every in self.hits.items():
+            hits = every.only(np.isfinite(every.time))
+            columns = {"beat": hits.beat, "pressure_mmhg": self.read.at(hits.time), "confidence": hits.confidence, "state": hits.state}
+            parts.append(pd.DataFrame({"time_s": hits.time, "mark": wave, **columns}))
         marks = pd.concat(parts, ignore_index=True)
         return marks.sort_values(["time_s", "mark"], kind="stable", ignore_index=True)
+
+
+def _first(index: NDArray[np.int64], score: Floats, hit: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Which hits keep their extremum when several chose the same: the one with the best score."""
+    order = np.lexsort((-score, np.where(hit, index, -1)))
+    ordered = np.where(hit, index, -1)[order]
+    keep = np.zeros(len(index), dtype=bool)
+    keep[order] = np.diff(ordered, prepend=-2) != 0
+    return keep & hit
