@@ -30,6 +30,10 @@ _TENSION_S = 0.11
 """From the onset of P to an atrial tension half developed."""
 _EARLIEST_A_S = 0.065
 """From the onset of P to the earliest top of an a; in a fast heart the v of the beat before stands just before that."""
+_NO_A_S = 0.15
+"""From the onset of P to where an a without a top of its own has long begun."""
+_BEFORE_C_S = 0.045
+"""From R to the earliest c."""
 _SHUT = 0.1
 """Opening of the tricuspid valve, 0 to 1, below which a contraction in systole meets a shut one."""
 
@@ -89,15 +93,18 @@ def wave_truth(
     following = np.append(r[1:], np.inf)
     opening = _opening(r, following, heart)
     r_seen, opens = r + delay_s, opening + delay_s
-    p_next = _next(rhythm.p_times_s, opening) + delay_s
     tallest = _time(peaks, peaks.highest(r_seen + 0.20, opens + 0.06))
-    c = peaks.highest(r_seen + 0.045, np.fmin(r_seen + 0.15, tallest - 0.02))
+    c = peaks.highest(r_seen + _BEFORE_C_S, np.fmin(r_seen + 0.15, tallest - 0.02))
     c_time = _time(peaks, c)  # 50 to 100 ms after R; before that the line still rings after a steep a
     a_rows, taken = _atrial(peaks, rhythm, delay_s, opening, heart, c)
     v = peaks.highest(r_seen + 0.20, opens + 0.06, but=taken)  # one peak cannot be both: the atrium's is its own
     v_time = _time(peaks, v)
+    of_p = np.full(len(rhythm.p_times_s) + 1, np.nan)  # one more for "no P follows", and NaN for a P without an R after it
+    of_p[: len(a_rows)] = a_rows["time_s"]
+    a_times = of_p[np.searchsorted(rhythm.p_times_s, opening)]
+    a_next = np.where(np.isnan(a_times), _next(rhythm.p_times_s, opening) + delay_s + _NO_A_S, a_times)  # y comes before the next a
     x = troughs.highest(np.where(np.isnan(c_time), r_seen + 0.05, c_time), np.where(np.isnan(v_time), opens, v_time))
-    y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, p_next + 0.10), following + delay_s + 0.02))
+    y = troughs.highest(np.fmax(v_time, opens - 0.02), np.fmin(np.fmin(opens + 0.35, a_next), following + delay_s + _BEFORE_C_S))
     rows = [
         _rows("v", v, peaks, r, 1.0, opens), _rows("x", x, troughs, r, -1.0, r_seen + 0.22), _rows("y", y, troughs, r, -1.0, opens + 0.08),
     ]

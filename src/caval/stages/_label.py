@@ -24,8 +24,8 @@ _LOG_PRIOR = -0.5 * ((_DELAYS_S - 0.04) / 0.03) ** 2
 """Delays of line and monitor that are tried: 0.01 to 0.04 s is usual (from memory), long or soft lines go beyond."""
 _LEFT_OUT = {"a": -3.5, "c": -1.2, "x": -4.0, "v": -6.0, "y": -3.0}
 """Score of a chain that lacks the wave."""
-_NO_A_UNPROVEN = -1.5
-"""The same for a where no P is proven."""
+_LENIENT_A, _FAST_S = -1.5, 0.45
+"""The same for a where no P is proven, and in a heart this fast, where a runs into c."""
 _LATEST_A_S = 0.08
 """After R, where no P says that a may be later."""
 _WEIGHT = {"a": 2.0, "c": 0.8, "x": 6.0, "v": 4.0, "y": 4.0}
@@ -103,7 +103,8 @@ def _terms(wave: str, index: NDArray[np.int64], usual: float, spread: float, bea
         off = (beat.time_s[k] - usual - _DELAYS_S) / spread
         if np.abs(off).min() < _FARTHEST:
             found.append((float(beat.time_s[k]), _WEIGHT[wave] * sign * beat.trace_mmhg[k] / beat.span_mmhg - 0.5 * off**2))
-    lacking = _NO_A_UNPROVEN if wave == "a" and beat.atrial != "coupled" else _LEFT_OUT[wave]
+    lenient = wave == "a" and (beat.atrial != "coupled" or beat.interval_s < _FAST_S)
+    lacking = _LENIENT_A if lenient else _LEFT_OUT[wave]
     return [*found, (np.nan, np.full(len(_DELAYS_S), lacking))]
 
 

@@ -8,7 +8,7 @@ fused; where nothing is, or nothing that has a place, nothing is marked.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 import pandas as pd
@@ -30,8 +30,19 @@ Floats = NDArray[np.float64]
 _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.070}
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
 _REACH_AFTER_P_S = 0.032
+_HEIGHT = {"x": 5.0}
+_HEIGHT_USUAL, _HEIGHT_AFTER_P = 2.5, 1.0
+"""What standing out by the picture's height is worth against distance from the place: most for x, by definition the deepest point, least for
+an a whose P is known."""
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
+_FALL_S, _FALL_SHARE, _RIPPLE_SHARE = 0.2, 0.5, 0.1
+"""A bump this soon after an a, lower than that by a share of the picture's height, and itself as low, is a ripple on the fall of the a."""
+_LEAN_S, _LEAN_INTERVAL_S = 0.12, 0.6
+"""In a fast heart, a and c this close may have one peak between them."""
+_DEEPER_S, _DEEPER_SHARE = 0.12, 0.04
+"""A nadir near the one that the picture favours is the one when it is deeper by this share of the picture's height."""
+_LATEST_CANNON_S = 0.25
 _INTO_NEXT_S = 0.12
 """How far past the next R v and y may stand: in a fast heart, through a line, they do."""
 _PROMINENCE_WINDOW_S = 0.5
@@ -100,15 +111,20 @@ def waves(
     of_p = found.seek_after_p(sharp[1.0], atria)
     broad[1.0].take_near(of_p.time)  # one extremum carries one mark
     found.seek("v", broad[1.0], r + 0.16, last)
-    found.seek("x", broad[-1.0], r + 0.06, found.time("v") - 0.05)
-    found.seek("y", broad[-1.0], found.time("v") + 0.04, last)
-    for wave in "xvy":
+    late_a = found.hide_v(of_p)
+    found.seek("x", broad[-1.0], r + 0.06, np.fmin(found.time("v"), late_a) - 0.05)
+    found.seek("y", broad[-1.0], np.fmax(found.time("v"), late_a) + 0.04, last)
+    found.deepen("y", broad[-1.0], found.time("y") - _DEEPER_S, np.fmin(found.time("y") + _DEEPER_S, last))
+    for wave in "vy":
         found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
-    bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + 0.18, found.time("x") - 0.05)
+    bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + _LATEST_CANNON_S, found.time("x") - 0.05)
     found.seek("a", sharp[1.0], *bounds, rows=found.without_p(coupling))
     found.join("a", of_p)
     broad[1.0].take_near(found.time("a"))
     found.seek("c", sharp[1.0], np.fmax(r + 0.02, found.time("a") + 0.04), np.fmin(found.time("x"), found.time("v") - 0.05) - 0.02)
+    found.one_of_two()
+    found.deepen("x", broad[-1.0], np.fmax(r + 0.06, found.time("c") + 0.02), np.fmin(found.time("v"), late_a) - 0.03)
+    found.sharpen("x", sharp[-1.0])
     found.seek("h", broad[1.0], found.time("y") + 0.08, next_r - 0.25)
     found.corner_c()
     found.foot_z(sharp[-1.0], delay_s)
@@ -186,19 +202,25 @@ class _Extrema:
 
 @dataclass(frozen=True, eq=False)
 class _Hits:
-    """Marks of one kind as columns; `time` is NaN where nothing was found."""
+    """Marks of one kind as columns; `time` (s) is NaN where nothing was found, `rise` is the prominence (mmHg)."""
 
     beat: NDArray[np.int64]
     time: Floats
+    rise: Floats
     confidence: Floats
     state: NDArray[np.object_]
 
     @classmethod
-    def none(cls) -> _Hits:
-        return cls(np.empty(0, np.int64), np.empty(0), np.empty(0), np.empty(0, object))
+    def none(cls, beat: NDArray[np.int64]) -> _Hits:
+        """No mark for each of some beats."""
+        nothing = np.full(len(beat), np.nan)
+        return cls(beat, nothing, nothing.copy(), nothing.copy(), np.full(len(beat), "clear", dtype=object))
 
     def only(self, rows: NDArray) -> _Hits:
-        return _Hits(self.beat[rows], self.time[rows], self.confidence[rows], self.state[rows])
+        return _Hits(*(getattr(self, column.name)[rows] for column in fields(self)))
+
+    def and_(self, more: _Hits) -> _Hits:
+        return _Hits(*(np.concatenate([getattr(self, column.name), getattr(more, column.name)]) for column in fields(self)))
 
 
 class _Found:
@@ -238,14 +260,14 @@ class _Found:
         """Find a wave of each beat near its place in the picture, between two bounds; NaN bounds do not bind."""
         place = self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
         sought = self.usable if rows is None else self.usable & rows
-        hits = self._choose(extrema, np.where(sought, place, np.nan), _REACH_S[wave], earliest, latest, self.which, self.beat)
+        hits = self._choose(extrema, np.where(sought, place, np.nan), (_REACH_S[wave], _HEIGHT.get(wave, _HEIGHT_USUAL)), earliest, latest, self.which, self.beat)
         self.hits[wave] = hits
         self.of_beat[wave] = hits.time.copy()
 
     def seek_after_p(self, peaks: _Extrema, atria: pd.DataFrame | None) -> _Hits:
         """The a after each P that the ECG shows or the pace of the atria places."""
         if atria is None or not len(atria):
-            return _Hits.none()
+            return _Hits.none(self.beat[:0])
         p = atria["time_s"].to_numpy(float)
         which = self._picture_of(p)
         place = p + np.array([picture.p_to_a_s for picture in self.pictures])[which]
@@ -256,7 +278,35 @@ class _Found:
         sound &= np.abs(p - self.centres[which]) <= _FARTHEST_S
         free = np.full(len(p), np.nan)
         beat = self.beat[np.minimum(follows, len(self.r) - 1)]
-        return self._choose(peaks, np.where(sound, place, np.nan), _REACH_AFTER_P_S, free, free, which, beat)
+        return self._choose(peaks, np.where(sound, place, np.nan), (_REACH_AFTER_P_S, _HEIGHT_AFTER_P), free, free, which, beat)
+
+    def deepen(self, wave: str, troughs: _Extrema, earliest: Floats, latest: Floats) -> None:
+        """Move a nadir to the deepest free trough between two bounds, where that is deeper beyond doubt."""
+        hits = self.hits[wave]
+        index, free = troughs.around(np.where(np.isfinite(hits.time), earliest, np.inf))
+        if not len(troughs.time):
+            return
+        inside = free & (troughs.time[index] <= latest[:, None])
+        depth = np.where(inside, troughs.height[index], -np.inf)
+        rows = np.arange(len(depth))
+        best = index[rows, depth.argmax(axis=1)]
+        margin = np.fmax(_DEEPER_SHARE * self.span, _WEAK_MMHG)[self.which]
+        deeper = np.isfinite(hits.time) & (depth.max(axis=1) > -self.read.at(hits.time) + margin)
+        hits.time[deeper] = self.of_beat[wave][deeper] = troughs.time[best[deeper]]
+        hits.rise[deeper] = troughs.prominence[best[deeper]]
+
+    def hide_v(self, of_p: _Hits) -> Floats:
+        """Take back each v that is a ripple on the fall of an a of late systole, which hides it; time of that a, NaN where there is none."""
+        v, a = self.time("v"), np.sort(of_p.time[np.isfinite(of_p.time)])
+        if not len(a):
+            return np.full(len(v), np.nan)
+        before = np.append(a, np.nan)[np.searchsorted(a, v) - 1]
+        height = [self.read.at(t) for t in (before, v)]
+        span = self.span[self.which]
+        ripple = (height[0] - height[1] > _FALL_SHARE * span) & (self.hits["v"].rise < _RIPPLE_SHARE * span)
+        hidden = (v - before < _FALL_S) & (before > self.r + 0.16) & ripple
+        v[hidden] = self.hits["v"].time[hidden] = np.nan
+        return np.where(hidden, before, np.nan)
 
     def without_p(self, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
         """Beats whose a is to be sought at a fixed place from R: those of whose atria the ECG says nothing, and those that have none."""
@@ -272,26 +322,27 @@ class _Found:
         mine = self.hits[wave]
         row = np.searchsorted(self.beat, found.beat)
         self.of_beat[wave][row] = np.fmax(found.time, self.of_beat[wave][row])  # rows in time order: the last assignment is the latest
-        mine = mine.only(np.isfinite(mine.time))
-        columns = [np.concatenate([getattr(mine, c), getattr(found, c)]) for c in ("beat", "time", "confidence", "state")]
-        self.hits[wave] = _Hits(*columns)
+        self.hits[wave] = mine.only(np.isfinite(mine.time)).and_(found)
 
     def _choose(
-        self, extrema: _Extrema, place: Floats, reach: float, earliest: Floats, latest: Floats, which: NDArray, beat: NDArray
+        self, extrema: _Extrema, place: Floats, weigh: tuple[float, float], earliest: Floats, latest: Floats, which: NDArray, beat: NDArray
     ) -> _Hits:
-        """Of the free extrema within 2.5 `reach` of each place and within the bounds, the one that stands out most and lies nearest."""
+        """Of the free extrema within 2.5 of the reach of each place and within the bounds, the one that stands out most and lies nearest.
+
+        `weigh` are that reach (s) and the worth of height.
+        """
+        reach, worth = weigh
         span, noise = self.span[which], self.noise[which]
         low, high = np.fmax(place - 2.5 * reach, earliest), np.fmin(place + 2.5 * reach, latest)
         sought = np.isfinite(place) & (low < high)
-        blank = np.full(len(place), np.nan)
         if not len(extrema.time):
-            return _Hits(beat, blank, blank.copy(), np.full(len(place), "clear", dtype=object))
+            return _Hits.none(beat)
         index, free = extrema.around(np.where(sought, low, np.inf))
         time, height, prominence = (c[index] for c in (extrema.time, extrema.height, extrema.prominence))
         inside = free & (time <= np.where(sought, high, -np.inf)[:, None])
         off = (time - place[:, None]) / reach
         stands = np.minimum(prominence / (0.3 * span[:, None]), 1.0)
-        score = np.where(inside, stands + 2.5 * height / span[:, None] - 0.5 * off**2, -np.inf)
+        score = np.where(inside, stands + worth * height / span[:, None] - 0.5 * off**2, -np.inf)
         rows = np.arange(len(place))
         best = score.argmax(axis=1)
         hit = inside[rows, best]
@@ -301,7 +352,22 @@ class _Found:
         weak = rise < np.maximum(_WEAK_MMHG, 2.0 * noise)
         clarity = rise / (rise + 2.0 * noise + 0.05)
         confidence = np.where(hit, clarity * np.exp(-0.125 * off[rows, best] ** 2), np.nan)
-        return _Hits(beat, np.where(hit, time[rows, best], np.nan), confidence, np.where(weak, "weak", "clear").astype(object))
+        return _Hits(beat, np.where(hit, time[rows, best], np.nan), rise, confidence, np.where(weak, "weak", "clear").astype(object))
+
+    def one_of_two(self) -> None:
+        """Where a and c have one peak between them, it is the one whose place is nearer."""
+        a, c, hits = self.time("a"), self.hits["c"], self.hits["a"]
+        place = {wave: self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which] for wave in "ac"}
+        fast = np.array([p.interval_s for p in self.pictures])[self.which] < _LEAN_INTERVAL_S
+        close = fast & (np.abs(place["c"] - place["a"]) < _LEAN_S)
+        rows = np.flatnonzero(np.isnan(c.time) & close & (np.abs(a - place["c"]) < np.abs(a - place["a"])))
+        if not len(rows):
+            return
+        order = np.argsort(hits.time)
+        at = order[np.searchsorted(hits.time, a[rows], sorter=order)]
+        for column in ("time", "rise", "state", "confidence"):
+            getattr(c, column)[rows] = getattr(hits, column)[at]
+        self.of_beat["c"][rows], self.of_beat["a"][rows], hits.time[at] = a[rows], np.nan, np.nan
 
     def sharpen(self, wave: str, sharp: _Extrema) -> None:
         """Move a broad wave to the free extremum of the finer trace nearest to it, 24 ms at most.
@@ -346,7 +412,7 @@ class _Found:
         weak = prominence < np.maximum(_WEAK_MMHG, 2.0 * noise)
         state = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
         confidence = np.where(has, self.hits["c"].confidence, 0.5)
-        self.hits["z"] = _Hits(self.beat, np.where(has, foot, np.where(readable, at_r, np.nan)), confidence, state)
+        self.hits["z"] = _Hits(self.beat, np.where(has, foot, np.where(readable, at_r, np.nan)), prominence, confidence, state)
 
     def table(self) -> pd.DataFrame:
         """The marks table."""
