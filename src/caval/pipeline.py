@@ -30,7 +30,7 @@ DETECTOR_GRID_S = 60.0
 """Detectors with thresholds of their own see one such stretch at a time, so that no threshold depends on the block."""
 DETECTOR_MARGIN_S = 10.0
 
-STAGES = ("anchors", "quality", "waves", "measure")
+STAGES = ("anchors", "atrial", "quality", "waves", "measure")
 """Stages that run by default."""
 DETECTORS = ("qrs", "neurokit", "upstroke")
 """Detectors whose candidates the anchors stage fuses by default."""

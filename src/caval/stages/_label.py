@@ -122,7 +122,7 @@ def _usual_a(beat: MedianBeat) -> tuple[float, float]:
 
 def _atrial_peaks(peaks: NDArray[np.int64], beat: MedianBeat) -> NDArray[np.int64]:
     """Peaks that may be an a at a fixed place before R: none where the ECG shows no P or one that goes its own way."""
-    if beat.atrial in ("apart", "absent"):
+    if beat.atrial == "apart" or (beat.atrial == "absent" and not beat.regular):
         return peaks[:0]
     if beat.atrial == "coupled":
         return peaks
@@ -153,7 +153,7 @@ def _best_chain(terms: Mapping[str, Terms], ys: Mapping[float, list[tuple[float,
 
 def _cannon(places: dict[str, float], beat: MedianBeat) -> None:
     """Rename to a what stands at c's place as an atrial wave on a shut valve would (see `_CANNON`)."""
-    if beat.atrial != "absent" or not beat.regular or not {"c", "x", "v"} <= set(places):
+    if beat.atrial != "absent" or not beat.regular or "a" in places or not {"c", "x", "v"} <= set(places):
         return
     c, x, v = (float(np.interp(places[w], beat.time_s, beat.trace_mmhg)) for w in "cxv")
     if c - x > _CANNON * (v - x):

@@ -32,8 +32,8 @@ _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.0
 _REACH_AFTER_P_S = 0.032
 _HEIGHT = {"x": 5.0}
 _HEIGHT_USUAL, _HEIGHT_AFTER_P = 2.5, 1.0
-"""What standing out by the picture's height is worth against distance from the place: most for x, by definition the deepest point, least for
-an a whose P is known."""
+"""What standing out by the picture's height is worth against distance from the place: most for x, by definition the deepest point, least
+for an a whose P is known."""
 _FARTHEST_S = 75.0
 """A picture farther than this from a beat says nothing about it."""
 _FALL_S, _FALL_SHARE, _RIPPLE_SHARE = 0.2, 0.5, 0.1
@@ -42,6 +42,8 @@ _LEAN_S, _LEAN_INTERVAL_S = 0.12, 0.6
 """In a fast heart, a and c this close may have one peak between them."""
 _DEEPER_S, _DEEPER_SHARE = 0.12, 0.04
 """A nadir near the one that the picture favours is the one when it is deeper by this share of the picture's height."""
+_EARLY = 0.8
+"""Share of the usual interval below which a beat is early: its P, if it has one, is not where it usually is."""
 _LATEST_CANNON_S = 0.25
 _INTO_NEXT_S = 0.12
 """How far past the next R v and y may stand: in a fast heart, through a line, they do."""
@@ -260,7 +262,8 @@ class _Found:
         """Find a wave of each beat near its place in the picture, between two bounds; NaN bounds do not bind."""
         place = self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
         sought = self.usable if rows is None else self.usable & rows
-        hits = self._choose(extrema, np.where(sought, place, np.nan), (_REACH_S[wave], _HEIGHT.get(wave, _HEIGHT_USUAL)), earliest, latest, self.which, self.beat)
+        weigh = _REACH_S[wave], _HEIGHT.get(wave, _HEIGHT_USUAL)
+        hits = self._choose(extrema, np.where(sought, place, np.nan), weigh, earliest, latest, self.which, self.beat)
         self.hits[wave] = hits
         self.of_beat[wave] = hits.time.copy()
 
@@ -296,7 +299,7 @@ class _Found:
         hits.rise[deeper] = troughs.prominence[best[deeper]]
 
     def hide_v(self, of_p: _Hits) -> Floats:
-        """Take back each v that is a ripple on the fall of an a of late systole, which hides it; time of that a, NaN where there is none."""
+        """Take back each v that is a ripple on the fall of an a of late systole, which hides it; time of that a, NaN without one."""
         v, a = self.time("v"), np.sort(of_p.time[np.isfinite(of_p.time)])
         if not len(a):
             return np.full(len(v), np.nan)
@@ -309,12 +312,17 @@ class _Found:
         return np.where(hidden, before, np.nan)
 
     def without_p(self, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
-        """Beats whose a is to be sought at a fixed place from R: those of whose atria the ECG says nothing, and those that have none."""
+        """Beats whose a is sought at a fixed place from R: those that come in time and whose P the ECG does not tell.
+
+        Where most beats have no P, these are all: the picture has an a there only when the pressure itself shows one at a fixed place.
+        """
+        interval = np.array([p.interval_s for p in self.pictures])[self.which]
+        in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * interval)
         if coupling is None or not len(coupling):
-            return np.ones(len(self.r), dtype=bool)
+            return in_time
         state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).fillna("unknown").to_numpy(object)
-        lone = np.array([p.atrial == "absent" for p in self.pictures])[self.which]  # there the picture has an a only if it is a cannon
-        return (state == "unknown") | ((state == "absent") & lone)
+        lone = np.array([p.atrial == "absent" for p in self.pictures])[self.which]
+        return in_time & ((state == "unknown") | ((state == "absent") & lone))
 
     def join(self, wave: str, more: _Hits) -> None:
         """Add marks to those of a wave; the last before R stands for the beat."""
