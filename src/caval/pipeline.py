@@ -63,7 +63,7 @@ class Pipeline:
     >>> import caval
     >>> tables = caval.Pipeline().run(caval.demo_recording(minutes=0.5))
     >>> sorted(tables)
-    ['beats', 'candidates', 'marks', 'readings', 'spans']
+    ['atria', 'beats', 'candidates', 'coupling', 'marks', 'readings', 'spans']
     """
 
     stages: Sequence[str] = STAGES

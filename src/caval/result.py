@@ -67,12 +67,12 @@ class Result:
         units: Mapping[str, str],
     ) -> Result:
         """The result of a pipeline's tables."""
-        table = {name: done.get(name, tables.empty(name)) for name in ("beats", "marks", "spans", "readings")}
+        table = {name: done.get(name, tables.empty(name)) for name in ("beats", "marks", "spans", "readings", "coupling", "atria")}
         renumber = dict(zip(table["beats"]["beat"], range(len(table["beats"])), strict=True))
-        for name in ("beats", "marks", "readings"):
+        for name in ("beats", "marks", "readings", "coupling", "atria"):
             kept = table[name][table[name]["beat"].isin(renumber)]
             table[name] = kept.assign(beat=kept["beat"].map(renumber).astype("int64")).reset_index(drop=True)
-        beats = tables.beat_table(table["beats"], table["marks"], table["readings"])
+        beats = tables.beat_table(table["beats"], table["marks"], table["readings"], table["coupling"])
         warnings = _statements(recording, roles, beats, table["marks"], table["spans"])
         run = {
             "program": "caval",
@@ -96,6 +96,8 @@ class Result:
             "notice": "Research software, not a medical device.",
         }
         others = {k: v for k, v in done.items() if k not in (*table, "candidates")}
+        if len(table["atria"]):
+            others["atria"] = table["atria"]
         return cls(recording, dict(roles), beats, table["marks"], table["spans"], others, run, warnings)
 
     @property

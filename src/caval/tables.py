@@ -110,8 +110,10 @@ def overlaps(starts_s: NDArray, stops_s: NDArray, spans: pd.DataFrame) -> NDArra
     return first
 
 
-def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame | None) -> pd.DataFrame:
-    """The beat table of the contract from what is known: beats, the marks (the truth), and the readings of each beat.
+def beat_table(
+    beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame | None, coupling: pd.DataFrame | None = None
+) -> pd.DataFrame:
+    """The beat table of the contract from what is known: beats, the marks (the truth), the readings of each beat, and what its P is.
 
     A wave without a mark is ``absent`` in a usable beat and ``unusable`` in another; its time and pressure are NaN. Of several marks
     of one wave in a beat the last before R counts for a, the surest for the others.
@@ -138,6 +140,10 @@ def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame 
     for column in per_beat.columns:
         if column not in ("usable", "reason", "r_time_s"):
             table[column] = table["beat"].map(per_beat[column])
+    if coupling is not None:
+        of_beat = coupling.set_index("beat")
+        table["p_state"] = table["beat"].map(of_beat["p"]).astype(object).where(table["beat"].isin(of_beat.index), "unknown")
+        table["pr_s"] = table["beat"].map(of_beat["pr_s"])
     for column in ("x_pre_mmhg", "mean_mmhg"):
         if column not in table:
             table[column] = np.nan

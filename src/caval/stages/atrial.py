@@ -62,15 +62,15 @@ _STEADY = 0.12
 
 
 @stage(name="atrial", gives=("atria", "coupling"), margin_s=120.0)
-def atrial(ecg: Signal, beats: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
+def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame, pd.DataFrame]:
     """Find P waves, and say of each beat whether it has one.
 
     Parameters
     ----------
-    ecg : Signal
-        One lead, any unit, either polarity.
     beats : DataFrame
         As the anchors stage gives them.
+    ecg : Signal, optional
+        One lead, any unit, either polarity. Without one, nothing is known of the atria.
 
     Returns
     -------
@@ -81,7 +81,7 @@ def atrial(ecg: Signal, beats: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame
         A row a beat: ``beat, r_time_s, p, pr_s, confidence``. `p` is ``coupled``; ``apart`` where P waves march at a pace of their own;
         ``absent`` where the lead is quiet enough to show a P and shows none; ``unknown`` where it is not.
     """
-    lead = _thin(ecg)
+    lead = None if ecg is None else _thin(ecg)
     r = beats["r_time_s"].to_numpy(float)
     if len(r) < FEWEST or lead is None:
         return tables.empty("atria"), _coupling(beats, np.full(len(r), "unknown", dtype=object), np.full(len(r), np.nan), np.zeros(len(r)))
@@ -100,7 +100,8 @@ def atrial(ecg: Signal, beats: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame
         if said is None:
             said = _marching(lead, r, near, here, marching, ((k - 0.5) * KNOT_S, (k + 0.5) * KNOT_S))
         state[here], onset[here], sure[here] = said
-    atria = _atria(beats, r, onset, sure, np.array(marching).reshape(-1, 2))
+    onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
+    atria = _atria(beats, r, onset, sure, np.round(np.array(marching).reshape(-1, 2), 6))
     return atria, _coupling(beats, state, r - onset, sure)
 
 
@@ -248,7 +249,7 @@ def _each(view: _View, r: Floats, picture: Floats, best: int, lead_s: float) -> 
     picture = picture - picture.mean()
     size = float(np.linalg.norm(picture))
     rows = view.rows(r)
-    outside: NDArray[np.bool_] = ~np.isfinite(rows).all(axis=1)
+    outside = np.asarray(~np.isfinite(rows).all(axis=1))
     rows = np.where(outside[:, None], 0.0, rows)
     reach = round(_REACH_S * rate)
     lags = np.arange(max(-reach, -best), min(reach, rows.shape[1] - best - len(picture)) + 1)
