@@ -114,7 +114,7 @@ class _Lead:
     start_s: float
 
     def index(self, time: Floats) -> NDArray[np.int64]:
-        return np.rint((time - self.start_s) * self.rate).astype(np.int64)
+        return np.floor((time - self.start_s) * self.rate + 0.5 + 1e-6).astype(np.int64)  # a tie goes the same way from any start
 
     def windows(self, r: Floats, before_s: float, after_s: float) -> Floats:
         """Windows around each R; NaN beyond the ends, shape (len(r), m)."""
