@@ -30,7 +30,7 @@ DETECTOR_GRID_S = 60.0
 """Detectors with thresholds of their own see one such stretch at a time, so that no threshold depends on the block."""
 DETECTOR_MARGIN_S = 10.0
 
-STAGES = ("anchors", "atrial", "quality", "waves", "measure")
+STAGES = ("anchors", "atrial", "quality", "waves", "measure", "delay", "rhythm")
 """Stages that run by default."""
 DETECTORS = ("qrs", "neurokit", "upstroke")
 """Detectors whose candidates the anchors stage fuses by default."""
@@ -63,7 +63,7 @@ class Pipeline:
     >>> import caval
     >>> tables = caval.Pipeline().run(caval.demo_recording(minutes=0.5))
     >>> sorted(tables)
-    ['atria', 'beats', 'candidates', 'coupling', 'marks', 'readings', 'spans']
+    ['atria', 'beats', 'candidates', 'coupling', 'delay', 'marks', 'readings', 'rhythms', 'spans']
     """
 
     stages: Sequence[str] = STAGES
