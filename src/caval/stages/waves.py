@@ -18,6 +18,7 @@ from scipy import signal
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
+from caval.stages._confidence import confidence
 from caval.stages._picture import Picture, running_pictures
 from caval.stages._signal import fill, lowpass, moving_mean, refine
 from caval.stages._usable import usable_beats
@@ -42,6 +43,8 @@ _LEAN_S, _LEAN_INTERVAL_S = 0.12, 0.6
 """In a fast heart, a and c this close may have one peak between them."""
 _DEEPER_S, _DEEPER_SHARE = 0.12, 0.04
 """A nadir near the one that the picture favours is the one when it is deeper by this share of the picture's height."""
+_P_TO_A_S, _LATEST_S = 0.090, 0.08
+"""From P to a at the heart (0.08 to 0.10 s, from memory), and the longest delay that z is read with."""
 _EARLY = 0.8
 """Share of the usual interval below which a beat is early: its P, if it has one, is not where it usually is."""
 _LATEST_CANNON_S = 0.25
@@ -88,7 +91,7 @@ def waves(
     fine_hz : float
         Where the noise allows it, narrow waves (a, c) are found, and all are placed, on the trace low-passed at this higher frequency.
     delay_s : float
-        Line and monitor delay with which z is read when there is no foot between a and c: the pressure at R plus this.
+        Line and monitor delay with which z is read when there is no foot between a and c and no P to tell it: the pressure at R plus this.
 
     Returns
     -------
@@ -204,19 +207,22 @@ class _Extrema:
 
 @dataclass(frozen=True, eq=False)
 class _Hits:
-    """Marks of one kind as columns; `time` (s) is NaN where nothing was found, `rise` is the prominence (mmHg)."""
+    """Marks of one kind as columns; `time` (s) is NaN where nothing was found, `rise` is the prominence (mmHg).
+
+    `evidence` is what the confidence is made of, shape (n, 4), see `caval.stages._confidence.design`.
+    """
 
     beat: NDArray[np.int64]
     time: Floats
     rise: Floats
-    confidence: Floats
+    evidence: Floats
     state: NDArray[np.object_]
 
     @classmethod
     def none(cls, beat: NDArray[np.int64]) -> _Hits:
         """No mark for each of some beats."""
         nothing = np.full(len(beat), np.nan)
-        return cls(beat, nothing, nothing.copy(), nothing.copy(), np.full(len(beat), "clear", dtype=object))
+        return cls(beat, nothing, nothing.copy(), np.full((len(beat), 4), np.nan), np.full(len(beat), "clear", dtype=object))
 
     def only(self, rows: NDArray) -> _Hits:
         return _Hits(*(getattr(self, column.name)[rows] for column in fields(self)))
@@ -239,6 +245,7 @@ class _Found:
         self.usable = usable & (np.abs(self.r - self.centres[self.which]) <= _FARTHEST_S)
         self.noise = np.array([p.noise_mmhg for p in pictures])
         self.span = np.array([p.span_mmhg for p in pictures])
+        self.interval = np.array([p.interval_s for p in pictures])
         self.hits: dict[str, _Hits] = {}
         self.of_beat: dict[str, Floats] = {}
 
@@ -316,7 +323,7 @@ class _Found:
 
         Where most beats have no P, these are all: the picture has an a there only when the pressure itself shows one at a fixed place.
         """
-        interval = np.array([p.interval_s for p in self.pictures])[self.which]
+        interval = self.interval[self.which]
         in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * interval)
         if coupling is None or not len(coupling):
             return in_time
@@ -358,22 +365,23 @@ class _Found:
         extrema.taken[index[rows, best][hit]] = True
         rise = prominence[rows, best]
         weak = rise < np.maximum(_WEAK_MMHG, 2.0 * noise)
-        clarity = rise / (rise + 2.0 * noise + 0.05)
-        confidence = np.where(hit, clarity * np.exp(-0.125 * off[rows, best] ** 2), np.nan)
-        return _Hits(beat, np.where(hit, time[rows, best], np.nan), rise, confidence, np.where(weak, "weak", "clear").astype(object))
+        second = np.where(np.arange(score.shape[1]) == best[:, None], -np.inf, score).max(axis=1)
+        lead = np.where(hit, score[rows, best], 0.0) - np.where(np.isfinite(second), second, -np.inf)
+        evidence = np.column_stack([rise / (noise + 0.02), off[rows, best], lead, self.interval[which]])
+        return _Hits(beat, np.where(hit, time[rows, best], np.nan), rise, evidence, np.where(weak, "weak", "clear").astype(object))
 
     def one_of_two(self) -> None:
         """Where a and c have one peak between them, it is the one whose place is nearer."""
         a, c, hits = self.time("a"), self.hits["c"], self.hits["a"]
         place = {wave: self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which] for wave in "ac"}
-        fast = np.array([p.interval_s for p in self.pictures])[self.which] < _LEAN_INTERVAL_S
+        fast = self.interval[self.which] < _LEAN_INTERVAL_S
         close = fast & (np.abs(place["c"] - place["a"]) < _LEAN_S)
         rows = np.flatnonzero(np.isnan(c.time) & close & (np.abs(a - place["c"]) < np.abs(a - place["a"])))
         if not len(rows):
             return
         order = np.argsort(hits.time)
         at = order[np.searchsorted(hits.time, a[rows], sorter=order)]
-        for column in ("time", "rise", "state", "confidence"):
+        for column in ("time", "rise", "state", "evidence"):
             getattr(c, column)[rows] = getattr(hits, column)[at]
         self.of_beat["c"][rows], self.of_beat["a"][rows], hits.time[at] = a[rows], np.nan, np.nan
 
@@ -405,29 +413,34 @@ class _Found:
         good = np.isfinite(height) & (height > 0.05 * self.span[self.which][rows])
         hits.time[rows[good]] = self.of_beat["c"][rows[good]] = time[np.arange(len(rows)), best][good]
         hits.state[rows[good]] = "fused"
-        hits.confidence[rows[good]] = 0.3
+        hits.evidence[rows[good]] = np.nan
 
     def foot_z(self, troughs: _Extrema, delay_s: float) -> None:
-        """The lowest point between a and c; without one, the pressure at R plus the delay, called fused."""
+        """The lowest point between a and c; without one, the pressure at R plus the delay, called fused.
+
+        The delay is what P to a takes longer than at the heart, where P is known.
+        """
         a, c, noise = self.time("a"), self.time("c"), self.noise[self.which]
         own_peak = self.hits["c"].state != "fused"
         first = np.searchsorted(troughs.time, np.where(np.isfinite(a), a, np.inf))
         foot = np.append(troughs.time, np.nan)[first]
         prominence = np.append(troughs.prominence, np.nan)[first]
         has = self.usable & own_peak & (foot > a) & (foot < c)
-        at_r = self.r + delay_s
+        late = np.array([p.p_to_a_s for p in self.pictures])[self.which] - _P_TO_A_S
+        at_r = self.r + np.where(np.isfinite(late), np.clip(late, 0.0, _LATEST_S), delay_s)
         readable = self.usable & np.isfinite(self.read.at(at_r)) & ~(at_r <= a) & ~(at_r >= c)  # the base of c lies before it
         weak = prominence < np.maximum(_WEAK_MMHG, 2.0 * noise)
         state = np.where(has, np.where(weak, "weak", "clear"), "fused").astype(object)
-        confidence = np.where(has, self.hits["c"].confidence, 0.5)
-        self.hits["z"] = _Hits(self.beat, np.where(has, foot, np.where(readable, at_r, np.nan)), prominence, confidence, state)
+        evidence = np.where(has[:, None], self.hits["c"].evidence, np.nan)  # a foot is as sure as the c it is the foot of
+        self.hits["z"] = _Hits(self.beat, np.where(has, foot, np.where(readable, at_r, np.nan)), prominence, evidence, state)
 
     def table(self) -> pd.DataFrame:
         """The marks table."""
         parts = []
         for wave, every in self.hits.items():
             hits = every.only(np.isfinite(every.time))
-            columns = {"beat": hits.beat, "pressure_mmhg": self.read.at(hits.time), "confidence": hits.confidence, "state": hits.state}
+            sure = confidence("c" if wave == "z" else wave, hits.evidence)
+            columns = {"beat": hits.beat, "pressure_mmhg": self.read.at(hits.time), "confidence": sure, "state": hits.state}
             parts.append(pd.DataFrame({"time_s": hits.time, "mark": wave, **columns}))
         marks = pd.concat(parts, ignore_index=True)
         return marks.sort_values(["time_s", "mark"], kind="stable", ignore_index=True)
