@@ -76,8 +76,8 @@ def label(beat: MedianBeat) -> dict[str, float]:
     """Time from R of each wave the beat shows, seconds; no entry for a wave it does not show.
 
     Where the heart puts them (seconds after R, before the delay; I is the interval, at most 1.6 s): a 0.095 after the onset of P (0.08 to
-    0.10, from memory), or 0.10 before R where no P is known; c 0.09; x 0.19 + 0.03 I; v 0.20 + 0.24 I; y 0.16 after v. The lines in I
-    follow the model's own circulation at 40 to 180/min; the spreads around them are wide enough for hearts that are not the model's.
+    0.10, from memory), or 0.10 before R where no P is known; c 0.09; x 0.19 + 0.03 I; v 0.20 + 0.24 I; y 0.04 + 0.11 I after v. The lines
+    in I lie between the model's own circulation at 40 to 180/min and real hearts; the spreads around them are wide enough for both.
     """
     interval = min(beat.interval_s, 1.6)
     peaks, troughs = beat.extrema(1.0), beat.extrema(-1.0)
@@ -112,12 +112,16 @@ def _terms_y(v: float, troughs: NDArray[np.int64], beat: MedianBeat) -> list[tup
     """Troughs that may be the y after this v, with their scores."""
     after = beat.time_s[troughs] - v
     near = troughs[(after > 0.04) & (after < 0.36)]
-    scores = -_WEIGHT["y"] * beat.trace_mmhg[near] / beat.span_mmhg - 0.5 * ((beat.time_s[near] - v - 0.16) / 0.09) ** 2
+    interval = min(beat.interval_s, 1.6)
+    off = (beat.time_s[near] - v - 0.04 - 0.11 * interval) / (0.03 + 0.05 * interval)
+    scores = -_WEIGHT["y"] * beat.trace_mmhg[near] / beat.span_mmhg - 0.5 * off**2
     return [*zip(beat.time_s[near].tolist(), scores.tolist(), strict=True), (np.nan, _LEFT_OUT["y"])]
 
 
 def _usual_a(beat: MedianBeat) -> tuple[float, float]:
-    return (0.095 - beat.pr_s, 0.025) if np.isfinite(beat.pr_s) else (-0.10, 0.07)
+    if not np.isfinite(beat.pr_s):
+        return -0.10, 0.07
+    return 0.095 - beat.pr_s, 0.04 if beat.interval_s < _FAST_S else 0.025  # in a fast heart QRS and T leave little of P to be seen
 
 
 def _atrial_peaks(peaks: NDArray[np.int64], beat: MedianBeat) -> NDArray[np.int64]:

@@ -31,6 +31,8 @@ Floats = NDArray[np.float64]
 _REACH_S = {"a": 0.045, "c": 0.028, "x": 0.045, "v": 0.050, "y": 0.055, "h": 0.070}
 """Spread (SD) allowed to a wave around its place in the picture; it is sought within 2.5 of it."""
 _REACH_AFTER_P_S = 0.032
+_HIDDEN_P, _REACH_AFTER_HIDDEN_P_S = 0.6, 0.055
+"""Confidence up to which a P was not seen but placed by pace, and the reach for the a after it."""
 _HEIGHT = {"x": 5.0}
 _HEIGHT_USUAL, _HEIGHT_AFTER_P = 2.5, 1.0
 """What standing out by the picture's height is worth against distance from the place: most for x, by definition the deepest point, least
@@ -41,7 +43,7 @@ _FALL_S, _FALL_SHARE, _RIPPLE_SHARE = 0.2, 0.5, 0.1
 """A bump this soon after an a, lower than that by a share of the picture's height, and itself as low, is a ripple on the fall of the a."""
 _LEAN_S, _LEAN_INTERVAL_S = 0.12, 0.6
 """In a fast heart, a and c this close may have one peak between them."""
-_DEEPER_S, _DEEPER_SHARE = 0.12, 0.04
+_DEEPER_S, _DEEPER_SHARE = 0.12, 0.01
 """A nadir near the one that the picture favours is the one when it is deeper by this share of the picture's height."""
 _P_TO_A_S, _LATEST_S = 0.090, 0.08
 """From P to a at the heart (0.08 to 0.10 s, from memory), and the longest delay that z is read with."""
@@ -113,12 +115,15 @@ def waves(
     sharp = {sign: _Extrema.of(read, sign) for sign in (1.0, -1.0)}
     broad = {sign: _Extrema.of(smooth, sign) for sign in (1.0, -1.0)}
     r, next_r, last = found.r, found.next_r, found.next_r + _INTO_NEXT_S
+    found.seek("v", broad[1.0], r + 0.16, last, take=False)
     of_p = found.seek_after_p(sharp[1.0], atria)
     broad[1.0].take_near(of_p.time)  # one extremum carries one mark
-    found.seek("v", broad[1.0], r + 0.16, last)
+    for peaks in (broad[1.0], sharp[1.0]):  # a wave too narrow for the smoother trace may stand on the finer one
+        found.seek("v", peaks, r + 0.16, last)
     late_a = found.hide_v(of_p)
-    found.seek("x", broad[-1.0], r + 0.06, np.fmin(found.time("v"), late_a) - 0.05)
-    found.seek("y", broad[-1.0], np.fmax(found.time("v"), late_a) + 0.04, last)
+    for troughs in (broad[-1.0], sharp[-1.0]):
+        found.seek("x", troughs, r + 0.06, np.fmin(found.time("v"), late_a) - 0.03)
+        found.seek("y", troughs, np.fmax(found.time("v"), late_a) + 0.04, last)
     found.deepen("y", broad[-1.0], found.time("y") - _DEEPER_S, np.fmin(found.time("y") + _DEEPER_S, last))
     for wave in "vy":
         found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
@@ -192,10 +197,14 @@ class _Extrema:
         near = np.where(time - self.time[left] < self.time[right] - time, self.time[left], self.time[right])
         return np.where(np.isfinite(time), near, np.nan)
 
-    def take_near(self, time: Floats) -> None:
-        """Take the extrema that lie at some times, as found on a finer trace."""
+    def time_near(self, time: Floats) -> Floats:
+        """Times of the extrema that lie at some times, as found on the other trace."""
         near = self.nearest(time)
-        self.taken |= np.isin(self.time, near[np.abs(near - time) <= _SHARPEN_S])
+        return near[np.abs(near - time) <= _SHARPEN_S]
+
+    def take_near(self, time: Floats) -> None:
+        """Take the extrema that lie at some times, as found on the other trace."""
+        self.taken |= np.isin(self.time, self.time_near(time))
 
     def around(self, start: Floats, most: int = 8) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
         """The `most` extrema from each start on, shape (n, most), and which of these exist and are free."""
@@ -227,6 +236,12 @@ class _Hits:
     def only(self, rows: NDArray) -> _Hits:
         return _Hits(*(getattr(self, column.name)[rows] for column in fields(self)))
 
+    def over(self, old: _Hits) -> _Hits:
+        """These where there are any, else the old ones."""
+        mine = np.isfinite(self.time)
+        pairs = [(getattr(self, column.name), getattr(old, column.name)) for column in fields(self)]
+        return _Hits(*(np.where(mine if new.ndim == 1 else mine[:, None], new, before) for new, before in pairs))
+
     def and_(self, more: _Hits) -> _Hits:
         return _Hits(*(np.concatenate([getattr(self, column.name), getattr(more, column.name)]) for column in fields(self)))
 
@@ -247,6 +262,7 @@ class _Found:
         self.span = np.array([p.span_mmhg for p in pictures])
         self.interval = np.array([p.interval_s for p in pictures])
         self.hits: dict[str, _Hits] = {}
+        self.guessed: set[str] = set()
         self.of_beat: dict[str, Floats] = {}
 
     def _picture_of(self, time: Floats) -> NDArray[np.int64]:
@@ -265,14 +281,35 @@ class _Found:
         last = np.fmax(self.time("y"), self.time("v") + 0.05)
         return np.concatenate([[np.nan], last[:-1]])
 
-    def seek(self, wave: str, extrema: _Extrema, earliest: Floats, latest: Floats, rows: NDArray[np.bool_] | None = None) -> None:
-        """Find a wave of each beat near its place in the picture, between two bounds; NaN bounds do not bind."""
+    def seek(
+        self,
+        wave: str,
+        extrema: _Extrema,
+        earliest: Floats,
+        latest: Floats,
+        rows: NDArray[np.bool_] | None = None,
+        *,
+        take: bool = True,
+    ) -> None:
+        """Find a wave, of the beats that have none yet, near its place in the picture, between two bounds; NaN bounds do not bind.
+
+        Without `take` it is a first guess, and the extremum stays free.
+        """
         place = self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
         sought = self.usable if rows is None else self.usable & rows
-        weigh = _REACH_S[wave], _HEIGHT.get(wave, _HEIGHT_USUAL)
+        old = self.hits.get(wave) if take and wave not in self.guessed else None
+        if old is not None:
+            sought = sought & np.isnan(old.time)
+        weigh = np.full(len(place), _REACH_S[wave]), _HEIGHT.get(wave, _HEIGHT_USUAL)
+        free = extrema.taken.copy()
         hits = self._choose(extrema, np.where(sought, place, np.nan), weigh, earliest, latest, self.which, self.beat)
-        self.hits[wave] = hits
-        self.of_beat[wave] = hits.time.copy()
+        if not take:
+            extrema.taken = free
+            self.guessed.add(wave)
+        else:
+            self.guessed.discard(wave)
+        self.hits[wave] = hits if old is None else hits.over(old)
+        self.of_beat[wave] = self.hits[wave].time.copy()
 
     def seek_after_p(self, peaks: _Extrema, atria: pd.DataFrame | None) -> _Hits:
         """The a after each P that the ECG shows or the pace of the atria places."""
@@ -286,9 +323,11 @@ class _Found:
         known = follows < len(self.r)
         sound = known & self.usable[np.minimum(follows, len(self.r) - 1)] & self.usable[np.maximum(within, 0)]
         sound &= np.abs(p - self.centres[which]) <= _FARTHEST_S
-        free = np.full(len(p), np.nan)
+        seen = atria["confidence"].to_numpy(float) > _HIDDEN_P
+        weigh = np.where(seen, _REACH_AFTER_P_S, _REACH_AFTER_HIDDEN_P_S), np.where(seen, _HEIGHT_AFTER_P, _HEIGHT_USUAL)
         beat = self.beat[np.minimum(follows, len(self.r) - 1)]
-        return self._choose(peaks, np.where(sound, place, np.nan), (_REACH_AFTER_P_S, _HEIGHT_AFTER_P), free, free, which, beat)
+        unbound = np.full(len(p), np.nan)
+        return self._choose(peaks, np.where(sound, place, np.nan), weigh, unbound, unbound, which, beat, self.time("v"))
 
     def deepen(self, wave: str, troughs: _Extrema, earliest: Floats, latest: Floats) -> None:
         """Move a nadir to the deepest free trough between two bounds, where that is deeper beyond doubt."""
@@ -300,7 +339,7 @@ class _Found:
         depth = np.where(inside, troughs.height[index], -np.inf)
         rows = np.arange(len(depth))
         best = index[rows, depth.argmax(axis=1)]
-        margin = np.fmax(_DEEPER_SHARE * self.span, _WEAK_MMHG)[self.which]
+        margin = np.fmax(_DEEPER_SHARE * self.span, 0.5 * _WEAK_MMHG)[self.which]
         deeper = np.isfinite(hits.time) & (depth.max(axis=1) > -self.read.at(hits.time) + margin)
         hits.time[deeper] = self.of_beat[wave][deeper] = troughs.time[best[deeper]]
         hits.rise[deeper] = troughs.prominence[best[deeper]]
@@ -340,11 +379,20 @@ class _Found:
         self.hits[wave] = mine.only(np.isfinite(mine.time)).and_(found)
 
     def _choose(
-        self, extrema: _Extrema, place: Floats, weigh: tuple[float, float], earliest: Floats, latest: Floats, which: NDArray, beat: NDArray
+        self,
+        extrema: _Extrema,
+        place: Floats,
+        weigh: tuple[Floats, Floats | float],
+        earliest: Floats,
+        latest: Floats,
+        which: NDArray,
+        beat: NDArray,
+        others: Floats | None = None,
     ) -> _Hits:
         """Of the free extrema within 2.5 of the reach of each place and within the bounds, the one that stands out most and lies nearest.
 
-        `weigh` are that reach (s) and the worth of height.
+        `weigh` are that reach (s) and the worth of height. An extremum that is likely another wave's, at one of the times of `others`, is
+        only chosen within one reach.
         """
         reach, worth = weigh
         span, noise = self.span[which], self.noise[which]
@@ -355,9 +403,12 @@ class _Found:
         index, free = extrema.around(np.where(sought, low, np.inf))
         time, height, prominence = (c[index] for c in (extrema.time, extrema.height, extrema.prominence))
         inside = free & (time <= np.where(sought, high, -np.inf)[:, None])
-        off = (time - place[:, None]) / reach
+        off = (time - place[:, None]) / reach[:, None]
+        if others is not None:
+            theirs = np.isin(extrema.time, extrema.time_near(others))[index]
+            inside &= ~theirs | (np.abs(off) < 2.0)
         stands = np.minimum(prominence / (0.3 * span[:, None]), 1.0)
-        score = np.where(inside, stands + worth * height / span[:, None] - 0.5 * off**2, -np.inf)
+        score = np.where(inside, stands + np.broadcast_to(worth, len(place))[:, None] * height / span[:, None] - 0.5 * off**2, -np.inf)
         rows = np.arange(len(place))
         best = score.argmax(axis=1)
         hit = inside[rows, best]
