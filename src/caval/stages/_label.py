@@ -24,6 +24,8 @@ _LOG_PRIOR = -0.5 * ((_DELAYS_S - 0.04) / 0.03) ** 2
 """Delays of line and monitor that are tried: 0.01 to 0.04 s is usual (from memory), long or soft lines go beyond."""
 _LEFT_OUT = {"a": -3.5, "c": -1.2, "x": -4.0, "v": -6.0, "y": -3.0}
 """Score of a chain that lacks the wave."""
+_PASSED_OVER = {"c": 3.0}
+"""Further cost of leaving a wave out though an extremum as tall as the picture stands at its place."""
 _LENIENT_A, _FAST_S = -1.5, 0.45
 """The same for a where no P is proven, and in a heart this fast, where a runs into c."""
 _LATEST_A_S = 0.08
@@ -99,13 +101,16 @@ def _terms(wave: str, index: NDArray[np.int64], usual: float, spread: float, bea
     """Extrema that may be the wave: (time from R, score at each delay); NaN stands for leaving it out."""
     sign = -1.0 if wave in "xy" else 1.0
     found: Terms = []
-    for k in index:
+    passed_over = np.zeros(len(_DELAYS_S))
+    prominence = signal.peak_prominences(sign * beat.trace_mmhg, index)[0] / beat.span_mmhg
+    for k, stands in zip(index, prominence, strict=True):
         off = (beat.time_s[k] - usual - _DELAYS_S) / spread
         if np.abs(off).min() < _FARTHEST:
+            passed_over = np.maximum(passed_over, stands * np.exp(-0.5 * off**2))
             found.append((float(beat.time_s[k]), _WEIGHT[wave] * sign * beat.trace_mmhg[k] / beat.span_mmhg - 0.5 * off**2))
     lenient = wave == "a" and (beat.atrial != "coupled" or beat.interval_s < _FAST_S)
     lacking = _LENIENT_A if lenient else _LEFT_OUT[wave]
-    return [*found, (np.nan, np.full(len(_DELAYS_S), lacking))]
+    return [*found, (np.nan, lacking - _PASSED_OVER.get(wave, 0.0) * passed_over)]
 
 
 def _terms_y(v: float, troughs: NDArray[np.int64], beat: MedianBeat) -> list[tuple[float, float]]:
@@ -146,9 +151,9 @@ def _best_chain(terms: Mapping[str, Terms], ys: Mapping[float, list[tuple[float,
                 if x < a + 0.06 or x < c + 0.03:
                     continue
                 for (v, v_score), tails in zip(terms["v"], ys.values(), strict=True):
-                    if v < x + 0.08 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04:
+                    if v < x + 0.08 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04 or v > c + interval_s - 0.08:
                         continue
-                    y, y_score = max((t for t in tails if not t[0] > a + interval_s - 0.03), key=lambda t: t[1])
+                    y, y_score = max((t for t in tails if not (t[0] > a + interval_s - 0.03 or t[0] > c + interval_s - 0.03)), key=lambda t: t[1])
                     score = float((start + x_score + v_score).max()) + y_score
                     if score > best:
                         best, chosen = score, (a, c, x, v, y)

@@ -51,6 +51,8 @@ class Picture:
         What the ECG shows of the atria of most beats: ``coupled``, ``apart``, ``absent``, ``unknown``.
     p_to_a_s : float
         From the onset of P to a, seconds; NaN where no P or no a is shown.
+    pr_s : float
+        From the onset of P to R, seconds; NaN where they are not coupled.
     """
 
     centre_s: float
@@ -62,6 +64,7 @@ class Picture:
     places: Mapping[str, float] = field(default_factory=dict)
     atrial: str = "unknown"
     p_to_a_s: float = np.nan
+    pr_s: float = np.nan
 
 
 def running_pictures(
@@ -141,7 +144,7 @@ def _picture(
     doubt = 1.2533 * (quarters[1] - quarters[0]) / 1.349 / len(traces) ** 0.5  # standard error of a median, by the normal law
     places = label(MedianBeat(time, median, doubt, interval_s, span, noise / len(traces) ** 0.5, atrial, pr_s, regular))
     p_to_a = places.get("a", np.nan) + pr_s if atrial == "coupled" else _after_p(smooth, p) if atrial == "apart" else np.nan
-    return Picture(centre_s, time, median, interval_s, span, noise, places, atrial, p_to_a)
+    return Picture(centre_s, time, median, interval_s, span, noise, places, atrial, p_to_a, pr_s)
 
 
 def _after_p(smooth: Signal, p: Floats) -> float:

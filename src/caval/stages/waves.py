@@ -137,6 +137,7 @@ def waves(
     found.sharpen("x", sharp[-1.0])
     found.seek("h", broad[1.0], found.time("y") + 0.08, next_r - 0.25)
     found.corner_c()
+    found.corner_a()
     found.foot_z(sharp[-1.0], delay_s)
     return found.table()
 
@@ -295,7 +296,7 @@ class _Found:
 
         Without `take` it is a first guess, and the extremum stays free.
         """
-        place = self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
+        place = self.place(wave)
         sought = self.usable if rows is None else self.usable & rows
         old = self.hits.get(wave) if take and wave not in self.guessed else None
         if old is not None:
@@ -424,7 +425,7 @@ class _Found:
     def one_of_two(self) -> None:
         """Where a and c have one peak between them, it is the one whose place is nearer."""
         a, c, hits = self.time("a"), self.hits["c"], self.hits["a"]
-        place = {wave: self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which] for wave in "ac"}
+        place = {wave: self.place(wave) for wave in "ac"}
         fast = self.interval[self.which] < _LEAN_INTERVAL_S
         close = fast & (np.abs(place["c"] - place["a"]) < _LEAN_S)
         rows = np.flatnonzero(np.isnan(c.time) & close & (np.abs(a - place["c"]) < np.abs(a - place["a"])))
@@ -447,24 +448,51 @@ class _Found:
         time[close] = self.of_beat[wave][close] = near[close]
         sharp.taken |= np.isin(sharp.time, near[close])
 
+    def place(self, wave: str) -> Floats:
+        """Where the picture has the wave of each beat, s; NaN where it has none."""
+        return self.r + np.array([p.places.get(wave, np.nan) for p in self.pictures])[self.which]
+
     def corner_c(self) -> None:
-        """Where c has no peak between a and x but the picture has c: the corner of the slope, the point farthest above the line a–x."""
-        a, x, hits = self.time("a"), self.time("x"), self.hits["c"]
-        place = self.r + np.array([p.places.get("c", np.nan) for p in self.pictures])[self.which]
-        rows = np.flatnonzero(self.usable & np.isnan(hits.time) & np.isfinite(a) & np.isfinite(x) & np.isfinite(place))
-        if not len(rows):
-            return
+        """Where c has no peak between a and x but the picture has c: the corner of the slope between them."""
+        rows = self.usable & np.isnan(self.hits["c"].time)
+        at, time = self._corner(rows, self.time("a"), self.time("x"), self.place("c"), 0.05)
+        hits = self.hits["c"]
+        hits.time[at], hits.state[at], hits.evidence[at] = time, "fused", np.nan
+        self.of_beat["c"][at] = time
+
+    def corner_a(self) -> None:
+        """Where a fast heart has a P and no peak of a before c: the corner of the slope from the y before to c.
+
+        P to a takes as long as R to c, within the spread of either, so a is expected as long before c as P is before R.
+        """
+        rows = self.usable & np.isnan(self.time("a")) & (self.interval[self.which] < _LEAN_INTERVAL_S)
+        expected = self.time("c") - np.array([p.pr_s for p in self.pictures])[self.which]
+        start = np.fmax(self.before(), self.time("c") - 0.25)
+        place = np.where(np.isfinite(self.place("a")), self.place("a"), expected)
+        at, time = self._corner(rows, start, self.time("c"), place, 0.03)
+        found = _Hits.none(self.beat[at])
+        found.time[:], found.state[:] = time, "fused"
+        self.join("a", found)
+
+    def _corner(
+        self, rows: NDArray[np.bool_], start: Floats, stop: Floats, place: Floats, least: float
+    ) -> tuple[NDArray[np.int64], Floats]:
+        """Beats, and in each the point near a place that lies farthest above the straight line from start to stop.
+
+        Only those that lie above it by a share of the picture's height.
+        """
+        at = np.flatnonzero(rows & np.isfinite(start) & np.isfinite(stop) & np.isfinite(place) & (start < stop))
+        if not len(at):
+            return at, np.empty(0)
         share = np.linspace(0.0, 1.0, 41)
-        time = a[rows, None] + (x - a)[rows, None] * share
+        time = start[at, None] + (stop - start)[at, None] * share
         level = self.read.at(time)
         above = level - (level[:, :1] + (level[:, -1:] - level[:, :1]) * share)
-        above[(np.abs(time - place[rows, None]) > 2.5 * _REACH_S["c"]) | (time < self.r[rows, None] + 0.02)] = -np.inf
+        above[np.abs(time - place[at, None]) > 2.5 * _REACH_S["c"]] = -np.inf
         best = above.argmax(axis=1)
-        height = above[np.arange(len(rows)), best]
-        good = np.isfinite(height) & (height > 0.05 * self.span[self.which][rows])
-        hits.time[rows[good]] = self.of_beat["c"][rows[good]] = time[np.arange(len(rows)), best][good]
-        hits.state[rows[good]] = "fused"
-        hits.evidence[rows[good]] = np.nan
+        height = above[np.arange(len(at)), best]
+        good = np.isfinite(height) & (height > least * self.span[self.which][at])
+        return at[good], time[np.arange(len(at)), best][good]
 
     def foot_z(self, troughs: _Extrema, delay_s: float) -> None:
         """The lowest point between a and c; without one, the pressure at R plus the delay, called fused.
