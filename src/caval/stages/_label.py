@@ -151,9 +151,10 @@ def _best_chain(terms: Mapping[str, Terms], ys: Mapping[float, list[tuple[float,
                 if x < a + 0.06 or x < c + 0.03:
                     continue
                 for (v, v_score), tails in zip(terms["v"], ys.values(), strict=True):
-                    if v < x + 0.08 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04 or v > c + interval_s - 0.08:
+                    if v < x + 0.05 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04 or v > c + interval_s - 0.08:
                         continue
-                    y, y_score = max((t for t in tails if not (t[0] > a + interval_s - 0.03 or t[0] > c + interval_s - 0.03)), key=lambda t: t[1])
+                    latest = np.fmin(a, c) + interval_s - 0.03
+                    y, y_score = max((tail for tail in tails if not tail[0] > latest), key=lambda tail: tail[1])
                     score = float((start + x_score + v_score).max()) + y_score
                     if score > best:
                         best, chosen = score, (a, c, x, v, y)
