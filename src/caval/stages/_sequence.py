@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from math import exp
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -10,38 +12,48 @@ __all__ = ["best_sequence"]
 Floats = NDArray[np.float64]
 
 _REFRACTORY_S = 0.25
+_REGULAR = 0.8
+"""What an interval of the usual length adds."""
+_REGULAR_SD = 0.10
+_SHORT, _TOO_SHORT = 0.6, 3.0
+"""Below this share of the usual interval, an interval takes away so much a unit of share."""
+_LONG, _LONGEST, _GAP = 1.3, 1.9, 1.8
+"""An interval of more than `_LONG` usual ones takes away up to `_GAP`: hearts seldom pause without a beat that came early."""
+_HOPELESS = -(2 * _REGULAR + _GAP)
+"""A candidate that takes away more than its intervals can give back is never part of the best sequence."""
 
 
 def best_sequence(time: Floats, weight: Floats, usual: Floats) -> NDArray[np.int64]:
-    """Indices of the candidates whose weights and intervals add up to the most.
+    """Indices of the candidates whose weights and intervals add up to the most; no interval is shorter than the refractory time.
 
-    An interval near the usual one adds up to 0.8, one much shorter takes away; none is shorter than the refractory time.
+    `time` in seconds, sorted; `weight` in log-odds; `usual` the interval usual there, s. All of shape (n,).
     """
-    total, back = np.array(weight, dtype=float), np.full(len(time), -1)
-    best_so_far = -np.inf
-    first = np.searchsorted(time, time - 2.2 * usual)
-    last = np.searchsorted(time, time - _REFRACTORY_S, side="right")
-    running = np.full(len(time) + 1, -np.inf)  # running[k]: the best total among candidates before k
-    running_at = np.full(len(time) + 1, -1)
-    for i in range(len(time)):
-        low, high = first[i], last[i]
-        best, link = max(0.0, running[low]), (running_at[low] if running[low] > 0 else -1)
-        if high > low:
-            share = (time[i] - time[low:high]) / usual[i]
-            gain = 0.8 * np.exp(-0.5 * ((share - 1.0) / 0.10) ** 2) - 3.0 * np.clip(0.6 - share, 0.0, None)
-            linked = total[low:high] + gain
-            k = int(np.argmax(linked))
-            if linked[k] > best:
-                best, link = float(linked[k]), low + k
-        total[i] = weight[i] + best
-        back[i] = link
-        better = total[i] > best_so_far
-        best_so_far = max(best_so_far, total[i])
-        running[i + 1] = best_so_far
-        running_at[i + 1] = i if better else running_at[i]
+    hopeful = np.flatnonzero(weight > _HOPELESS)
+    times = time[hopeful]
+    first = np.searchsorted(times, times - 2.2 * usual[hopeful]).tolist()
+    last = np.searchsorted(times, times - _REFRACTORY_S, side="right").tolist()
+    t, w, u = times.tolist(), weight[hopeful].tolist(), usual[hopeful].tolist()
+    total: list[float] = []
+    back: list[int] = []
+    running: list[tuple[float, int]] = [(0.0, -1)]  # running[k]: the best total among candidates before k, and which
+    for i, (here, own, period) in enumerate(zip(t, w, u, strict=True)):
+        before, link = running[first[i]]
+        best, link = (before - _GAP, link) if before > _GAP else (0.0, -1)
+        for k in range(first[i], last[i]):
+            share = (here - t[k]) / period
+            gain = total[k] + _REGULAR * exp(-0.5 * ((share - 1.0) / _REGULAR_SD) ** 2)
+            if share < _SHORT:
+                gain -= _TOO_SHORT * (_SHORT - share)
+            elif share > _LONG:
+                gain -= _GAP * min(1.0, (share - _LONG) / (_LONGEST - _LONG))
+            if gain > best:
+                best, link = gain, k
+        total.append(own + best)
+        back.append(link)
+        running.append(max(running[-1], (total[i], i)))
     chosen = []
-    i = int(np.argmax(total)) if len(total) and total.max() > 0 else -1
+    i = running[-1][1]
     while i >= 0:
         chosen.append(i)
         i = back[i]
-    return np.array(chosen[::-1], dtype=np.int64)
+    return hopeful[np.array(chosen[::-1], dtype=np.int64)]

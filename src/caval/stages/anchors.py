@@ -21,13 +21,14 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import GRID_S, Evidence, ecg_evidence, no_evidence
+from caval.stages._evidence import MARGIN_S, Evidence, Transit, best_within, ecg_evidence, learn_transit, no_evidence
 from caval.stages._sequence import best_sequence
 from caval.stages._signal import cut, fill, lowpass
 
 __all__ = ["anchors"]
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 _SAME_S = 0.09
 """Events of two ECG detectors this close are one candidate."""
@@ -39,9 +40,13 @@ _REACH_S = 0.10
 """How far an upstroke may lie from R plus the transit time and still belong to it; a weak one may come as much later again."""
 _WEAK = 0.35
 """Share of the usual upstroke's slope below which an upstroke is weak: a premature beat's, or a dicrotic wave."""
+_EARLY = 0.8
+"""Share of the usual interval below which a beat may have no pulse: the ventricle had no time to fill."""
+_NOT_FILLED_S = 0.02
+"""A weak pulse's transit is this uncertain besides: the ventricle takes longer to open the valve."""
 
 
-@stage(name="anchors", gives=("beats",), margin_s=2 * GRID_S)
+@stage(name="anchors", gives=("beats",), margin_s=MARGIN_S)
 def anchors(
     candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, *, transit_s: float = 0.20
 ) -> pd.DataFrame:
@@ -61,7 +66,7 @@ def anchors(
     -------
     DataFrame
         ``beat, r_time_s, r_sd_s, rr_s, source, confidence``. `source` is ``fused`` when ECG and artery agree, else the one that shows
-        the beat; `r_sd_s` is the standard deviation of the R time, from the time resolution for ECG beats and from the spread
+        the beat; `r_sd_s` is the standard deviation of the R time, from the noise around the complex for ECG beats and from the spread
         of the transit time for arterial ones.
     """
     time = candidates["time_s"].to_numpy(float)
@@ -73,8 +78,10 @@ def anchors(
         return tables.empty("beats")
     strength = _strength(abp, feet) if abp is not None else np.empty(0)
     feet, strength = _without_dicrotic(feet, strength)
-    evidence = ecg_evidence(ecg, events, feet[strength > _WEAK], transit_s) if ecg is not None and len(events) else no_evidence(transit_s)
-    pool = _pool(events, votes, feet, strength, evidence)
+    strong = feet[strength > _WEAK]
+    evidence = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
+    evidence, votes = _in_order(evidence, votes)
+    pool = _pool(votes, feet, strength, evidence, learn_transit(evidence, strong, transit_s))
     chosen = best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
     return pd.DataFrame(
         {
@@ -99,18 +106,21 @@ class _Pool:
 
 
 def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
-    """Events of all ECG detectors as one list; where several coincide the time of ``qrs`` stands. Votes count the other detectors."""
+    """Events of all ECG detectors as one list; where several coincide the time of ``qrs`` stands.
+
+    Votes, in log-odds: for what another detector saw too, against what it did not.
+    """
     own = np.sort(time[names == "qrs"])
     other = np.sort(time[names != "qrs"])
     if not len(own):
         own = other[np.diff(other, prepend=-np.inf) > _SAME_S]
-    votes = np.zeros(len(own))
+    votes = np.full(len(own), -0.25)
     if len(own) and len(other):
         at = _nearest(own, other)
         far = np.abs(own[at] - other) > _SAME_S
-        votes[np.unique(at[~far])] = 1.0
+        votes[np.unique(at[~far])] = 0.25
         lone = other[far][np.diff(other[far], prepend=-np.inf) > _SAME_S]
-        own, votes = np.concatenate([own, lone]), np.concatenate([votes, np.ones(len(lone))])
+        own, votes = np.concatenate([own, lone]), np.concatenate([votes, np.full(len(lone), 0.25)])
         order = np.argsort(own, kind="stable")
         own, votes = own[order], votes[order]
     return own, votes
@@ -148,59 +158,81 @@ def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
     return feet[keep], strength[keep]
 
 
-def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: Evidence) -> _Pool:
+def _in_order(evidence: Evidence, votes: Floats) -> tuple[Evidence, Floats]:
+    """Both in the order of R times: events moved to their R may have overtaken one another."""
+    order = np.argsort(evidence.time_s, kind="stable")
+    parts = (evidence.time_s, evidence.sd_s, evidence.size, evidence.likeness, evidence.standing, evidence.quiet)
+    return Evidence(*(part[order] for part in parts), evidence.quiet_at_s, evidence.quiet_level), votes[order] if len(order) else votes[:0]
+
+
+def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, transit: Transit) -> _Pool:
     """Every candidate with its weight: ECG events, and upstrokes that no likely ECG event explains, set back by the transit time."""
-    transit = np.interp(feet, evidence.minute_s, evidence.transit_s)
-    expected = feet - transit
-    ecg_says = _ecg_weight(votes, evidence) if len(events) else np.empty(0)
+    events = evidence.time_s
+    delay, spread = transit.at(feet)
+    spread = np.hypot(spread, _NOT_FILLED_S * (strength < 0.6))
+    expected = feet - delay
+    ecg_says = _ecg_weight(votes, evidence)
     weak = strength < _WEAK
-    got_pulse, off_s = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
-    got_ripple, _ = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
-    has_foot = got_pulse | got_ripple
-    awake = _awake(feet[~weak], events)
-    artery_says = np.where(got_pulse, 2.0 - 8.0 * off_s, np.where(got_ripple, 0.6, -1.6 * awake))
+    pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
+    ripple = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
+    # An early beat may have no pulse; but it must be clearly one: some likeness to the minute's QRS says nothing then.
+    early = _early(events, expected[~weak])
+    vague = _shape_weight(evidence) * (1.0 - _ramp(evidence.likeness, 0.8, 0.95))
+    silence = _awake(feet[~weak], events) * np.where(early, 0.5 + vague, 1.6)
+    off_s = np.abs(events - np.append(expected[~weak], 0.0)[pulse])
+    artery_says = np.where(pulse >= 0, 2.0 - 8.0 * off_s, np.where(ripple >= 0, 0.6, -silence))
+    # Where the ECG says little the upstroke says when: R is the upstroke less the transit time.
+    trust = np.maximum(evidence.quiet, _ramp(evidence.likeness, 0.6, 0.85))
+    by_foot = (pulse >= 0) & (trust < 0.5)
+    events = np.where(by_foot, np.append(expected[~weak], 0.0)[pulse], events)
+    sd = np.where(by_foot, np.append(spread[~weak], 0.0)[pulse], np.hypot(evidence.sd_s, 0.03 * (1.0 - trust)))
+    source = np.where(by_foot, "abp", np.where((pulse >= 0) | (ripple >= 0), "fused", "ecg")).astype(object)
+
     explained = np.zeros(len(feet), dtype=bool)
-    sure = events[ecg_says > _DOUBT] if len(events) else events
+    sure = np.sort(events[ecg_says > _DOUBT])
     if len(sure) and len(feet):
         explained = np.abs(sure[_nearest(sure, expected)] - expected) < _SAME_S
     lone, lone_strength = expected[~explained], strength[~explained]
-    heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level) if len(events) else np.zeros(len(lone))
+    heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level)
     time = np.concatenate([events, lone])
     weight = np.concatenate([ecg_says + artery_says, 2.8 * _ramp(lone_strength, 0.2, 0.6) - 1.0 - 3.2 * heard])
-    source = np.concatenate(
-        [np.where(has_foot, np.where(ecg_says > _DOUBT, "fused", "abp"), "ecg").astype(object), np.full(len(lone), "abp", dtype=object)]
-    )
-    spread = np.interp(time, evidence.minute_s, evidence.spread_s)
-    sd = np.where(source == "abp", np.maximum(spread, 0.01), 0.004)
+    source = np.concatenate([source, np.full(len(lone), "abp", dtype=object)])
+    sd = np.concatenate([sd, spread[~explained]])
     order = np.argsort(time, kind="stable")
     return _Pool(time[order], weight[order], source[order], sd[order])
 
 
 def _ecg_weight(votes: Floats, evidence: Evidence) -> Floats:
     """Log-odds of a QRS from the ECG alone: in quiet, size decides and any shape will do; in noise only the minute's shape counts."""
-    big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -6.0, -3.0)
-    alike = np.clip(evidence.likeness, 0.0, 1.0) ** 3 * _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
-    in_quiet = 3.6 * big + 1.2 * alike - 2.2
-    in_noise = 4.2 * alike - 2.6
-    return evidence.quiet * in_quiet + (1 - evidence.quiet) * in_noise + 0.5 * (votes - 0.5)
+    big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -10.0, -5.0)
+    return evidence.quiet * (3.6 * big - 2.2) + (1 - evidence.quiet) * -2.6 + _shape_weight(evidence) - 2.0 * (1 - evidence.standing) + votes
+
+
+def _shape_weight(evidence: Evidence) -> Floats:
+    """What likeness to the minute's QRS adds; more in noise, where there is nothing else to go by."""
+    fits = _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
+    return np.clip(evidence.likeness, 0.0, 1.0) ** 3 * fits * (1.2 * evidence.quiet + 4.2 * (1 - evidence.quiet))
 
 
 def _ramp(value: Floats, low: float, high: float) -> Floats:
     return np.clip((value - low) / (high - low), 0.0, 1.0)
 
 
-def _assign(events: Floats, weight: Floats, expected: Floats, reach_s: tuple[float, float]) -> tuple[NDArray[np.bool_], Floats]:
-    """Give each upstroke to one event, the likelier first, no more than `reach_s` after or before its expected R.
-
-    Returns who got one and how far off it is (s).
+def _assign(events: Floats, weight: Floats, expected: Floats, reach_s: tuple[float, float]) -> NDArray[np.int64]:
+    """The upstroke that each event has, -1 for none: each upstroke goes to the likeliest and nearest event within `reach_s` after or
+    before its expected R.
     """
-    got, distance = np.zeros(len(events), dtype=bool), np.zeros(len(events))
+    has = np.full(len(events), -1)
     first, last = np.searchsorted(events, expected - reach_s[1]), np.searchsorted(events, expected + reach_s[0])
-    for low, high, place in zip(first, last, expected, strict=True):
-        if high > low:
-            best = low + int(np.argmax(weight[low:high] - 12.0 * np.abs(events[low:high] - place)))
-            got[best], distance[best] = True, abs(events[best] - place)
-    return got, distance
+    filled = np.flatnonzero(last > first)
+    if len(filled):
+        first, last = first[filled], last[filled]
+        index = first[:, None] + np.arange((last - first).max())
+        inside = index < last[:, None]
+        index = np.minimum(index, len(events) - 1)
+        worth = np.where(inside, weight[index] - 12.0 * np.abs(events[index] - expected[filled, None]), -np.inf)
+        has[first + worth.argmax(axis=1)] = filled
+    return has
 
 
 def _awake(feet: Floats, at_s: Floats) -> Floats:
@@ -211,9 +243,19 @@ def _awake(feet: Floats, at_s: Floats) -> Floats:
     return np.clip((count - 1) / 3.0, 0.0, 1.0)
 
 
+def _early(events: Floats, expected: Floats) -> Bools:
+    """Which events come so soon after the beat of a strong pulse that they may have none of their own."""
+    if len(expected) < 4:
+        return np.zeros(len(events), dtype=bool)
+    usual = ndimage.median_filter(np.diff(expected), size=min(15, len(expected) - 1), mode="nearest")
+    before = np.searchsorted(expected, events - 0.5 * _SAME_S) - 1
+    since = np.where(before >= 0, events - expected[np.maximum(before, 0)], np.inf)
+    return since < _EARLY * usual[np.clip(before, 0, len(usual) - 1)]
+
+
 def _usual_interval(pool: _Pool) -> Floats:
     """Running median interval between likely candidates, s, at every candidate."""
-    likely = pool.time_s[pool.weight > 0.5]
+    likely = pool.time_s[pool.weight > 1.0]
     if len(likely) < 4:
         return np.full(len(pool.time_s), 0.85)
     gaps = np.diff(likely)
