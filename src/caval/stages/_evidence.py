@@ -41,6 +41,8 @@ _SMOOTH, _ROUGH = 1.7, 2.3
 """Roughness over the usual one around a complex: of a trace that is clear, and of one that shows nothing. A wide complex has 0.5 to 1."""
 _ALIKE = 0.8
 """Correlation with the minute's QRS above which a complex is placed by it."""
+_ONE_COMPLEX_S = 0.05
+"""Events this close once they are placed are bumps of one complex."""
 _ONE_S = 0.30
 """Two events of odd shape this close are the parts of one beat, its QRS and its T at the most: the taller is the QRS."""
 _BAND_EXCESS = 2.8
@@ -51,8 +53,8 @@ _BAND_EXCESS = 2.8
 class Evidence:
     """What the ECG says of each event.
 
-    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's, `likeness` the
-    correlation with the minute's QRS, `standing` its height over that of the tallest event around it, of which it is a part or which is a
+    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's, `likeness` to
+    the minute's QRS (correlation, at most 1), `standing` its height over that of the tallest event around it, of which it is a part or which is a
     part of it (1 for one like the minute's QRS), `quiet` runs from 0 (the ECG around is as loud as a QRS) to 1. `quiet_at_s`/`quiet_level` give it
     over time.
     """
@@ -67,16 +69,17 @@ class Evidence:
     quiet_level: Floats
 
 
-def no_evidence() -> Evidence:
+def no_evidence() -> tuple[Evidence, NDArray[np.int64]]:
     """That of an ECG that is not there."""
     none = np.empty(0)
-    return Evidence(none, none, none, none, none, none, np.array([0.0]), np.array([0.0]))
+    return Evidence(none, none, none, none, none, none, np.array([0.0]), np.array([0.0])), np.empty(0, dtype=np.int64)
 
 
-def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> Evidence:
-    """Place, size, likeness and quiet of each event, with the picture and the size of the QRS of its minute.
+def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, NDArray[np.int64]]:
+    """Place, size, likeness and quiet of each event, with the picture and the size of the QRS of its minute; and which events they are of.
 
-    `feet` are strong arterial upstrokes: the complexes they follow are the ones to learn from.
+    In order of R times; of events that turn out to be of one complex, the one most like the minute's QRS. `feet` are strong arterial
+    upstrokes: the complexes they follow are the ones to learn from.
     """
     cleaned, missing = clean_ecg(ecg)
     thin = thinned(cleaned)
@@ -100,11 +103,14 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> Evidence:
         near, here = slice(low, high), slice(first, last)
         teachers = _teachers(events[near], loudness[near], feet) + low
         usual[i], rough[i] = np.median(loudness[teachers]), np.median(roughness.at(events[teachers]))
-        picture, tip_s = _picture(events, loudness / usual[i], teachers, shapes, cleaned, thin)
+        picture, tip_s, middle_s = _picture(events, loudness / usual[i], teachers, shapes, cleaned, thin)
+        whole = _unit(np.median(_forms(thin, middle_s), axis=0))
         if last == first:
             continue
         size[here] = loudness[here] / max(usual[i], 1e-12)
         shift, likeness[here], error_s = shapes.part(here).lie_on(picture)
+        form = _forms(thin, thin.start_s + (place[here] + shift) / rate) @ whole
+        likeness[here] = np.minimum(likeness[here], 0.5 + 0.5 * form)
         alike = likeness[here] > _ALIKE
         time[here] = np.where(alike, thin.start_s + (place[here] + shift) / rate + tip_s, time[here])
         sd[here] = np.where(alike, error_s, sd[here])
@@ -112,7 +118,16 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> Evidence:
     height[likeness > _ALIKE] = 0.0  # a beat of the usual shape is no part of another
     around = best_within(events, height, events - _ONE_S, events + _ONE_S)[1]
     standing = np.where(height > 0, height / np.maximum(height[around], 1e-12), 1.0)
-    return Evidence(time, sd, size, likeness, standing, np.interp(time, at_s, level), at_s, level)
+    keep = _unlike_neighbours(time, likeness)
+    time, sd, size, likeness, standing = (part[keep] for part in (time, sd, size, likeness, standing))
+    return Evidence(time, sd, size, likeness, standing, np.interp(time, at_s, level), at_s, level), keep
+
+
+def _unlike_neighbours(time: Floats, likeness: Floats) -> NDArray[np.int64]:
+    """Indices in order of time, less those within `_ONE_COMPLEX_S` of one of greater likeness."""
+    order = np.argsort(time, kind="stable")
+    best = order[best_within(time[order], likeness[order], time[order] - _ONE_COMPLEX_S, time[order] + _ONE_COMPLEX_S)[1]]
+    return order[best == order]
 
 
 @dataclass(frozen=True, eq=False)
@@ -174,8 +189,8 @@ def _teachers(events: Floats, loudness: Floats, feet: Floats) -> NDArray[np.int6
 
 def _picture(
     events: Floats, size: Floats, teachers: NDArray[np.int64], shapes: _Shapes, cleaned: Signal, thin: Signal
-) -> tuple[Floats, float]:
-    """QRS picture (band, unit norm) of the teachers, and how long after its middle the tip of R comes, s."""
+) -> tuple[Floats, float, Floats]:
+    """QRS picture (band, unit norm) of the teachers, how long after its middle the tip of R comes (s), and when those middles are (s)."""
     fair = teachers[(size[teachers] > 0.4) & (size[teachers] < 2.5)]
     fair = fair if len(fair) else teachers
     fair = fair[:: -(-len(fair) // _TEACHERS)]
@@ -186,12 +201,21 @@ def _picture(
         shift, likeness, _ = some.lie_on(picture)
         alike = likeness > 0.5
         if alike.sum() < 3:
-            return picture, 0.0
+            return picture, 0.0, events[fair]
         picture = _unit(np.median(some.laid(shift)[alike], axis=0))
     shift, likeness, _ = some.lie_on(picture)
     good = likeness >= min(0.8, float(np.median(likeness)))
     middle_s = (np.rint(thin.position(events[fair[good]])) + shift[good]) / thin.sampling_rate + thin.start_s
-    return picture, _tip(cleaned, middle_s)
+    return picture, _tip(cleaned, middle_s), middle_s
+
+
+def _forms(thin: Signal, middle_s: Floats) -> Floats:
+    """The whole complex (0.12 s either way, all its frequencies, less the line between its ends), unit norm, a row each."""
+    half = round(_OWN_HALF_S * thin.sampling_rate)
+    windows = cut(thin.values, np.rint(thin.position(middle_s)).astype(int) - half, 2 * half + 1)
+    left, right = windows[:, :3].mean(axis=1), windows[:, -3:].mean(axis=1)
+    windows = windows - left[:, None] - (right - left)[:, None] * np.linspace(0.0, 1.0, 2 * half + 1)
+    return windows / (np.linalg.norm(windows, axis=1, keepdims=True) + 1e-12)
 
 
 def _unit(picture: Floats) -> Floats:

@@ -17,8 +17,9 @@ _REGULAR = 0.8
 _REGULAR_SD = 0.10
 _SHORT, _TOO_SHORT = 0.6, 3.0
 """Below this share of the usual interval, an interval takes away so much a unit of share."""
-_LONG, _LONGEST, _GAP = 1.3, 1.9, 1.8
-"""An interval of more than `_LONG` usual ones takes away up to `_GAP`: hearts seldom pause without a beat that came early."""
+_LONG, _LONGEST, _GAP = 1.5, 1.95, 1.5
+"""An interval of more than `_LONG` usual ones takes away up to `_GAP`: hearts seldom pause without a beat that came early.
+The pause after such a beat, up to one and a half, is no pause of that kind."""
 _HOPELESS = -(2 * _REGULAR + _GAP)
 """A candidate that takes away more than its intervals can give back is never part of the best sequence."""
 

@@ -40,8 +40,10 @@ _REACH_S = 0.10
 """How far an upstroke may lie from R plus the transit time and still belong to it; a weak one may come as much later again."""
 _WEAK = 0.35
 """Share of the usual upstroke's slope below which an upstroke is weak: a premature beat's, or a dicrotic wave."""
-_EARLY = 0.8
-"""Share of the usual interval below which a beat may have no pulse: the ventricle had no time to fill."""
+_EARLY, _VERY_EARLY = 0.8, 0.5
+"""Share of the usual interval below which a beat of odd shape, and one of the usual shape, may have no pulse: the ventricle had no time to
+fill (our choice)."""
+_OFF_S = 0.04
 _NOT_FILLED_S = 0.02
 """A weak pulse's transit is this uncertain besides: the ventricle takes longer to open the valve."""
 
@@ -79,8 +81,8 @@ def anchors(
     strength = _strength(abp, feet) if abp is not None else np.empty(0)
     feet, strength = _without_dicrotic(feet, strength)
     strong = feet[strength > _WEAK]
-    evidence = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
-    evidence, votes = _in_order(evidence, votes)
+    evidence, of = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
+    votes = votes[of]
     pool = _pool(votes, feet, strength, evidence, learn_transit(evidence, strong, transit_s))
     chosen = best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
     return pd.DataFrame(
@@ -158,13 +160,6 @@ def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
     return feet[keep], strength[keep]
 
 
-def _in_order(evidence: Evidence, votes: Floats) -> tuple[Evidence, Floats]:
-    """Both in the order of R times: events moved to their R may have overtaken one another."""
-    order = np.argsort(evidence.time_s, kind="stable")
-    parts = (evidence.time_s, evidence.sd_s, evidence.size, evidence.likeness, evidence.standing, evidence.quiet)
-    return Evidence(*(part[order] for part in parts), evidence.quiet_at_s, evidence.quiet_level), votes[order] if len(order) else votes[:0]
-
-
 def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, transit: Transit) -> _Pool:
     """Every candidate with its weight: ECG events, and upstrokes that no likely ECG event explains, set back by the transit time."""
     events = evidence.time_s
@@ -175,14 +170,17 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     weak = strength < _WEAK
     pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
     ripple = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
-    # An early beat may have no pulse; but it must be clearly one: some likeness to the minute's QRS says nothing then.
-    early = _early(events, expected[~weak])
-    vague = _shape_weight(evidence) * (1.0 - _ramp(evidence.likeness, 0.8, 0.95))
-    silence = _awake(feet[~weak], events) * np.where(early, 0.5 + vague, 1.6)
+    # An early beat may have no pulse, one of the ventricle more easily: it contracts out of step. Likeness that is vague says nothing then.
+    clear = _ramp(evidence.likeness, 0.8, 0.95)
+    since = _since(events, expected[~weak])
+    early = since < _EARLY - (_EARLY - _VERY_EARLY) * clear
+    silence = _awake(feet[~weak], events) * np.where(early, 0.5 + (1.0 - clear) * _shape_weight(evidence), 1.6)
     off_s = np.abs(events - np.append(expected[~weak], 0.0)[pulse])
     artery_says = np.where(pulse >= 0, 2.0 - 8.0 * off_s, np.where(ripple >= 0, 0.6, -silence))
-    # Where the ECG says little the upstroke says when: R is the upstroke less the transit time.
-    trust = np.maximum(evidence.quiet, _ramp(evidence.likeness, 0.6, 0.85))
+    # Where the ECG says little the upstroke says when: R is the upstroke less the transit time. So it is where a beat on time has a shape
+    # of its own and another time than its pulse: the ECG is disturbed.
+    disturbed = (evidence.likeness < 0.8) & (since > _EARLY) & (off_s > _OFF_S)
+    trust = np.maximum(evidence.quiet * ~disturbed, _ramp(evidence.likeness, 0.6, 0.85))
     by_foot = (pulse >= 0) & (trust < 0.5)
     events = np.where(by_foot, np.append(expected[~weak], 0.0)[pulse], events)
     sd = np.where(by_foot, np.append(spread[~weak], 0.0)[pulse], np.hypot(evidence.sd_s, 0.03 * (1.0 - trust)))
@@ -243,14 +241,14 @@ def _awake(feet: Floats, at_s: Floats) -> Floats:
     return np.clip((count - 1) / 3.0, 0.0, 1.0)
 
 
-def _early(events: Floats, expected: Floats) -> Bools:
-    """Which events come so soon after the beat of a strong pulse that they may have none of their own."""
+def _since(events: Floats, expected: Floats) -> Floats:
+    """Time from the beat of the last strong pulse to each event, as a share of the usual interval; infinite without one."""
     if len(expected) < 4:
-        return np.zeros(len(events), dtype=bool)
+        return np.full(len(events), np.inf)
     usual = ndimage.median_filter(np.diff(expected), size=min(15, len(expected) - 1), mode="nearest")
     before = np.searchsorted(expected, events - 0.5 * _SAME_S) - 1
     since = np.where(before >= 0, events - expected[np.maximum(before, 0)], np.inf)
-    return since < _EARLY * usual[np.clip(before, 0, len(usual) - 1)]
+    return since / usual[np.clip(before, 0, len(usual) - 1)]
 
 
 def _usual_interval(pool: _Pool) -> Floats:
