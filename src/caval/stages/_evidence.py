@@ -43,7 +43,7 @@ _ALIKE = 0.8
 """Correlation with the minute's QRS above which a complex is placed by it."""
 _ONE_COMPLEX_S = 0.05
 """Events this close once they are placed are bumps of one complex."""
-_ONE_S = 0.30
+_ONE_S = 0.40
 """Two events of odd shape this close are the parts of one beat, its QRS and its T at the most: the taller is the QRS."""
 _BAND_EXCESS = 2.8
 """Noise in the QRS band at 125 Hz: samples that hang together, 125 / (2 · 22 Hz)."""
@@ -53,7 +53,8 @@ _BAND_EXCESS = 2.8
 class Evidence:
     """What the ECG says of each event.
 
-    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's, `likeness` to
+    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's,
+    `tallness` its height over the usual one, `likeness` that to
     the minute's QRS (correlation, at most 1), `standing` its height over that of the tallest event around it, of which it is a part or which is a
     part of it (1 for one like the minute's QRS), `quiet` runs from 0 (the ECG around is as loud as a QRS) to 1. `quiet_at_s`/`quiet_level` give it
     over time.
@@ -62,6 +63,7 @@ class Evidence:
     time_s: Floats
     sd_s: Floats
     size: Floats
+    tallness: Floats
     likeness: Floats
     standing: Floats
     quiet: Floats
@@ -72,7 +74,7 @@ class Evidence:
 def no_evidence() -> tuple[Evidence, NDArray[np.int64]]:
     """That of an ECG that is not there."""
     none = np.empty(0)
-    return Evidence(none, none, none, none, none, none, np.array([0.0]), np.array([0.0])), np.empty(0, dtype=np.int64)
+    return Evidence(none, none, none, none, none, none, none, np.array([0.0]), np.array([0.0])), np.empty(0, dtype=np.int64)
 
 
 def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, NDArray[np.int64]]:
@@ -94,7 +96,7 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
     size, likeness, sd = np.zeros(count), np.zeros(count), np.full(count, 0.004)
     time = thin.start_s + own / rate
     cells = np.arange(int(np.floor(events[0] / GRID_S + 1e-9)), int(np.floor(events[-1] / GRID_S + 1e-9)) + 1)
-    usual, rough = np.full(len(cells), np.nan), np.full(len(cells), np.nan)
+    usual, usual_height, rough = (np.full(len(cells), np.nan) for _ in range(3))
     roughness = _roughness(cleaned)
     for i, k in enumerate(cells):
         low, first, last, high = np.searchsorted(events, GRID_S * np.array([k - 1, k, k + 1, k + 2]))
@@ -102,7 +104,8 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
             continue
         near, here = slice(low, high), slice(first, last)
         teachers = _teachers(events[near], loudness[near], feet) + low
-        usual[i], rough[i] = np.median(loudness[teachers]), np.median(roughness.at(events[teachers]))
+        usual[i], usual_height[i] = np.median(loudness[teachers]), np.median(height[teachers])
+        rough[i] = np.median(roughness.at(events[teachers]))
         picture, tip_s, middle_s = _picture(events, loudness / usual[i], teachers, shapes, cleaned, thin)
         whole = _unit(np.median(_forms(thin, middle_s), axis=0))
         if last == first:
@@ -115,12 +118,13 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
         time[here] = np.where(alike, thin.start_s + (place[here] + shift) / rate + tip_s, time[here])
         sd[here] = np.where(alike, error_s, sd[here])
     at_s, level = _quiet(ecg, thin, missing, energy, roughness, cells, usual, rough)
+    tallness = height / np.maximum(np.nan_to_num(usual_height, nan=np.inf), 1e-12)[np.floor(events / GRID_S + 1e-9).astype(int) - cells[0]]
     height[likeness > _ALIKE] = 0.0  # a beat of the usual shape is no part of another
     around = best_within(events, height, events - _ONE_S, events + _ONE_S)[1]
     standing = np.where(height > 0, height / np.maximum(height[around], 1e-12), 1.0)
     keep = _unlike_neighbours(time, likeness)
-    time, sd, size, likeness, standing = (part[keep] for part in (time, sd, size, likeness, standing))
-    return Evidence(time, sd, size, likeness, standing, np.interp(time, at_s, level), at_s, level), keep
+    time, sd, size, tallness, likeness, standing = (part[keep] for part in (time, sd, size, tallness, likeness, standing))
+    return Evidence(time, sd, size, tallness, likeness, standing, np.interp(time, at_s, level), at_s, level), keep
 
 
 def _unlike_neighbours(time: Floats, likeness: Floats) -> NDArray[np.int64]:

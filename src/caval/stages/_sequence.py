@@ -24,29 +24,31 @@ _HOPELESS = -(2 * _REGULAR + _GAP)
 """A candidate that takes away more than its intervals can give back is never part of the best sequence."""
 
 
-def best_sequence(time: Floats, weight: Floats, usual: Floats) -> NDArray[np.int64]:
+def best_sequence(time: Floats, weight: Floats, usual: Floats, steadiness: Floats) -> NDArray[np.int64]:
     """Indices of the candidates whose weights and intervals add up to the most; no interval is shorter than the refractory time.
 
-    `time` in seconds, sorted; `weight` in log-odds; `usual` the interval usual there, s. All of shape (n,).
+    `time` in seconds, sorted; `weight` in log-odds; `usual` the interval usual there, s; `steadiness` from 0 (intervals are
+    all over the place, and a pause means nothing) to 1. All of shape (n,).
     """
     hopeful = np.flatnonzero(weight > _HOPELESS)
     times = time[hopeful]
     first = np.searchsorted(times, times - 2.2 * usual[hopeful]).tolist()
     last = np.searchsorted(times, times - _REFRACTORY_S, side="right").tolist()
     t, w, u = times.tolist(), weight[hopeful].tolist(), usual[hopeful].tolist()
+    gaps = (_GAP * steadiness[hopeful]).tolist()
     total: list[float] = []
     back: list[int] = []
     running: list[tuple[float, int]] = [(0.0, -1)]  # running[k]: the best total among candidates before k, and which
-    for i, (here, own, period) in enumerate(zip(t, w, u, strict=True)):
+    for i, (here, own, period, gap) in enumerate(zip(t, w, u, gaps, strict=True)):
         before, link = running[first[i]]
-        best, link = (before - _GAP, link) if before > _GAP else (0.0, -1)
+        best, link = (before - gap, link) if before > gap else (0.0, -1)
         for k in range(first[i], last[i]):
             share = (here - t[k]) / period
             gain = total[k] + _REGULAR * exp(-0.5 * ((share - 1.0) / _REGULAR_SD) ** 2)
             if share < _SHORT:
                 gain -= _TOO_SHORT * (_SHORT - share)
             elif share > _LONG:
-                gain -= _GAP * min(1.0, (share - _LONG) / (_LONGEST - _LONG))
+                gain -= gap * min(1.0, (share - _LONG) / (_LONGEST - _LONG))
             if gain > best:
                 best, link = gain, k
         total.append(own + best)

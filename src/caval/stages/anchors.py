@@ -11,7 +11,7 @@ neighbours.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -43,6 +43,12 @@ _WEAK = 0.35
 _EARLY, _VERY_EARLY = 0.8, 0.5
 """Share of the usual interval below which a beat of odd shape, and one of the usual shape, may have no pulse: the ventricle had no time to
 fill (our choice)."""
+_UNSTEADY = 0.16
+"""Median deviation of the intervals, as a share of the usual one: fibrillation has 0.15 or more (a coefficient of variation of 0.22)."""
+_T_OVER = 0.42
+"""T is over this long after R, times the square root of the interval (Bazett, Heart 1920;7:353, from memory): what is tall then is no T."""
+_WIDE = 0.6
+"""A wide complex has so much less energy in the QRS band than a narrow one as tall (computed for one twice as wide)."""
 _OFF_S = 0.04
 _NOT_FILLED_S = 0.02
 """A weak pulse's transit is this uncertain besides: the ventricle takes longer to open the valve."""
@@ -84,7 +90,7 @@ def anchors(
     evidence, of = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
     votes = votes[of]
     pool = _pool(votes, feet, strength, evidence, learn_transit(evidence, strong, transit_s))
-    chosen = best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
+    chosen = best_sequence(pool.time_s, pool.weight, *_usual_interval(pool))
     return pd.DataFrame(
         {
             "beat": np.arange(len(chosen)),
@@ -166,13 +172,14 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     delay, spread = transit.at(feet)
     spread = np.hypot(spread, _NOT_FILLED_S * (strength < 0.6))
     expected = feet - delay
-    ecg_says = _ecg_weight(votes, evidence)
     weak = strength < _WEAK
+    since, usual = _since(events, expected[~weak])
+    evidence = replace(evidence, size=np.where(since * np.sqrt(usual) > _T_OVER, np.maximum(evidence.size, _WIDE * evidence.tallness), evidence.size))
+    ecg_says = _ecg_weight(votes, evidence)
     pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
     ripple = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
     # An early beat may have no pulse, one of the ventricle more easily: it contracts out of step. Likeness that is vague says nothing then.
     clear = _ramp(evidence.likeness, 0.8, 0.95)
-    since = _since(events, expected[~weak])
     early = since < _EARLY - (_EARLY - _VERY_EARLY) * clear
     silence = _awake(feet[~weak], events) * np.where(early, 0.5 + (1.0 - clear) * _shape_weight(evidence), 1.6)
     off_s = np.abs(events - np.append(expected[~weak], 0.0)[pulse])
@@ -241,21 +248,27 @@ def _awake(feet: Floats, at_s: Floats) -> Floats:
     return np.clip((count - 1) / 3.0, 0.0, 1.0)
 
 
-def _since(events: Floats, expected: Floats) -> Floats:
-    """Time from the beat of the last strong pulse to each event, as a share of the usual interval; infinite without one."""
+def _since(events: Floats, expected: Floats) -> tuple[Floats, Floats]:
+    """Time from the beat of the last strong pulse to each event, as a share of the usual interval there, and that (s).
+
+    Infinite and 1 where no pulse says.
+    """
     if len(expected) < 4:
-        return np.full(len(events), np.inf)
+        return np.full(len(events), np.inf), np.ones(len(events))
     usual = ndimage.median_filter(np.diff(expected), size=min(15, len(expected) - 1), mode="nearest")
     before = np.searchsorted(expected, events - 0.5 * _SAME_S) - 1
-    since = np.where(before >= 0, events - expected[np.maximum(before, 0)], np.inf)
-    return since / usual[np.clip(before, 0, len(usual) - 1)]
+    period = usual[np.clip(before, 0, len(usual) - 1)]
+    return np.where(before >= 0, (events - expected[np.maximum(before, 0)]) / period, np.inf), np.where(before >= 0, period, 1.0)
 
 
-def _usual_interval(pool: _Pool) -> Floats:
-    """Running median interval between likely candidates, s, at every candidate."""
+def _usual_interval(pool: _Pool) -> tuple[Floats, Floats]:
+    """Running median interval between likely candidates (s), and how steady they are (0 to 1), at every candidate."""
     likely = pool.time_s[pool.weight > 1.0]
     if len(likely) < 4:
-        return np.full(len(pool.time_s), 0.85)
-    gaps = np.diff(likely)
-    usual = ndimage.median_filter(np.clip(gaps, 0.25, 2.5), size=min(15, len(gaps)), mode="nearest")
-    return np.interp(pool.time_s, likely[1:], usual)
+        return np.full(len(pool.time_s), 0.85), np.zeros(len(pool.time_s))
+    gaps = np.clip(np.diff(likely), 0.25, 2.5)
+    size = min(15, len(gaps))
+    usual = ndimage.median_filter(gaps, size=size, mode="nearest")
+    scatter = ndimage.median_filter(np.abs(gaps / usual - 1.0), size=size, mode="nearest")
+    steady = _ramp(-scatter, -_UNSTEADY, -0.5 * _UNSTEADY)
+    return np.interp(pool.time_s, likely[1:], usual), np.interp(pool.time_s, likely[1:], steady)
