@@ -15,7 +15,7 @@ __all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "clip_spans", "empty", "join
 
 SCHEMAS: dict[str, dict[str, str]] = {
     "candidates": {"time_s": "f8", "detector": "object"},
-    "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8"},
+    "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8", "kind": "object"},
     "marks": {"time_s": "f8", "mark": "object", "beat": "i8", "pressure_mmhg": "f8", "confidence": "f8", "state": "object"},
     "spans": {"onset_s": "f8", "duration_s": "f8", "kind": "object", "channel": "object", "detail": "object"},
     "readings": {"beat": "i8", "r_time_s": "f8", "usable": "bool", "reason": "object", "x_pre_mmhg": "f8", "mean_mmhg": "f8"},

@@ -12,7 +12,7 @@ from caval.recording import Signal
 from caval.stages._signal import Thin, bandpass, cut, moving_mean, refine
 from caval.stages.detect import QRS_BAND_HZ, clean_ecg, qrs_energy, thinned
 
-__all__ = ["GRID_S", "MARGIN_S", "Evidence", "Transit", "best_within", "ecg_evidence", "learn_transit", "no_evidence"]
+__all__ = ["ALIKE", "GRID_S", "MARGIN_S", "Evidence", "Transit", "best_within", "ecg_evidence", "learn_transit", "no_evidence"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -39,7 +39,7 @@ _FINEST_S = 0.0002
 """A tenth of a sample at 500 Hz: no place is known better."""
 _SMOOTH, _ROUGH = 1.7, 2.3
 """Roughness over the usual one around a complex: of a trace that is clear, and of one that shows nothing. A wide complex has 0.5 to 1."""
-_ALIKE = 0.8
+ALIKE = 0.85
 """Correlation with the minute's QRS above which a complex is placed by it."""
 _ONE_COMPLEX_S = 0.05
 """Events this close once they are placed are bumps of one complex."""
@@ -98,14 +98,15 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
     cells = np.arange(int(np.floor(events[0] / GRID_S + 1e-9)), int(np.floor(events[-1] / GRID_S + 1e-9)) + 1)
     usual, usual_height, rough = (np.full(len(cells), np.nan) for _ in range(3))
     roughness = _roughness(cleaned)
+    rough_at_s = roughness.time_s
     for i, k in enumerate(cells):
         low, first, last, high = np.searchsorted(events, GRID_S * np.array([k - 1, k, k + 1, k + 2]))
         if high == low:
             continue
         near, here = slice(low, high), slice(first, last)
-        teachers = _teachers(events[near], loudness[near], feet) + low
+        teachers = _teachers(events[near], loudness[near], np.interp(events[near], rough_at_s, roughness.values), feet) + low
         usual[i], usual_height[i] = np.median(loudness[teachers]), np.median(height[teachers])
-        rough[i] = np.median(roughness.at(events[teachers]))
+        rough[i] = np.median(np.interp(events[teachers], rough_at_s, roughness.values))
         picture, tip_s, middle_s = _picture(events, loudness / usual[i], teachers, shapes, cleaned, thin)
         whole = _unit(np.median(_forms(thin, middle_s), axis=0))
         if last == first:
@@ -114,12 +115,12 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
         shift, likeness[here], error_s = shapes.part(here).lie_on(picture)
         form = _forms(thin, thin.start_s + (place[here] + shift) / rate) @ whole
         likeness[here] = np.minimum(likeness[here], 0.5 + 0.5 * form)
-        alike = likeness[here] > _ALIKE
+        alike = likeness[here] > ALIKE
         time[here] = np.where(alike, thin.start_s + (place[here] + shift) / rate + tip_s, time[here])
         sd[here] = np.where(alike, error_s, sd[here])
     at_s, level = _quiet(ecg, thin, missing, energy, roughness, cells, usual, rough)
     tallness = height / np.maximum(np.nan_to_num(usual_height, nan=np.inf), 1e-12)[np.floor(events / GRID_S + 1e-9).astype(int) - cells[0]]
-    height[likeness > _ALIKE] = 0.0  # a beat of the usual shape is no part of another
+    height[likeness > ALIKE] = 0.0  # a beat of the usual shape is no part of another
     around = best_within(events, height, events - _ONE_S, events + _ONE_S)[1]
     standing = np.where(height > 0, height / np.maximum(height[around], 1e-12), 1.0)
     keep = _unlike_neighbours(time, likeness)
@@ -181,29 +182,36 @@ class _Shapes:
         return self.wide[rows[:, None], start[:, None] + np.arange(length)] / self.norm[rows, start][:, None]
 
 
-def _teachers(events: Floats, loudness: Floats, feet: Floats) -> NDArray[np.int64]:
-    """The events to learn from: those an upstroke follows; without an artery, the loudest of their neighbourhood."""
+def _teachers(events: Floats, loudness: Floats, roughness: Floats, feet: Floats) -> NDArray[np.int64]:
+    """The events to learn from: those an upstroke follows; without an artery, the loudest of their neighbourhood where it is smooth."""
     feet = feet[(feet > events[0]) & (feet < events[-1] + 0.5)]
     teach = np.unique(best_within(events, loudness, feet - 0.45, feet - 0.05)[1])
     if len(teach) >= 5:
         return teach
     top = loudness[best_within(events, loudness, events - 1.2, events + 1.2)[1]]
-    return np.flatnonzero(loudness > 0.7 * np.minimum(top, np.median(top) * 1.5))
+    alone = best_within(events, loudness, events - 0.25, events + 0.25)[1] == np.arange(len(events))
+    loud = alone & (loudness > 0.7 * np.minimum(top, np.median(top) * 1.5))
+    smooth = loud & (roughness < _ROUGH * np.percentile(roughness[loud], 25)) if loud.any() else loud
+    return np.flatnonzero(smooth if smooth.any() else loudness == loudness.max())
 
 
 def _picture(
     events: Floats, size: Floats, teachers: NDArray[np.int64], shapes: _Shapes, cleaned: Signal, thin: Signal
 ) -> tuple[Floats, float, Floats]:
     """QRS picture (band, unit norm) of the teachers, how long after its middle the tip of R comes (s), and when those middles are (s)."""
+    gap = np.diff(events[teachers], prepend=-np.inf)
     fair = teachers[(size[teachers] > 0.4) & (size[teachers] < 2.5)]
-    fair = fair if len(fair) else teachers
+    late = teachers[(size[teachers] > 0.4) & (size[teachers] < 2.5) & (gap > 0.9 * np.mean(gap[1:]))] if len(gap) > 1 else fair
+    fair = late if len(late) >= _LEAST_BEATS else fair if len(fair) else teachers  # premature beats are no model
     fair = fair[:: -(-len(fair) // _TEACHERS)]
     some = shapes.part(fair)
     shift = np.zeros(len(fair))
-    picture = _unit(np.median(some.laid(shift), axis=0))
+    laid = some.laid(shift)
+    alike = laid @ laid.T > 0.9
+    picture = _unit(np.median(laid[alike[alike.sum(axis=1).argmax()]], axis=0))  # the commonest shape, not a mean of several
     for _ in range(2):
         shift, likeness, _ = some.lie_on(picture)
-        alike = likeness > 0.5
+        alike = likeness > 0.8
         if alike.sum() < 3:
             return picture, 0.0, events[fair]
         picture = _unit(np.median(some.laid(shift)[alike], axis=0))
@@ -305,8 +313,8 @@ def _quiet(
     usual_then = usual[cell]
     usual_then = np.maximum(np.nan_to_num(usual_then, nan=np.inf), 1e-12)
     quiet = np.clip((0.45 - background / usual_then) / 0.30, 0.0, 1.0)
-    rougher = roughness.at(at_s) / np.maximum(np.nan_to_num(rough[cell], nan=np.inf), 1e-12)
-    quiet *= np.clip((_ROUGH - np.nan_to_num(rougher, nan=1.0)) / (_ROUGH - _SMOOTH), 0.0, 1.0)
+    rougher = np.interp(at_s, roughness.time_s, roughness.values) / np.maximum(np.nan_to_num(rough[cell], nan=np.inf), 1e-12)
+    quiet *= np.clip((_ROUGH - rougher) / (_ROUGH - _SMOOTH), 0.0, 1.0)
     width = round(0.5 * rate) | 1
     swing = sparse.take(ndimage.maximum_filter1d(thin.values, width) - ndimage.minimum_filter1d(thin.values, width))
     loudest = ndimage.maximum_filter1d(level, round(_SILENCE_S * per_s) | 1)

@@ -21,8 +21,8 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import MARGIN_S, Evidence, Transit, best_within, ecg_evidence, learn_transit, no_evidence
-from caval.stages._sequence import best_sequence
+from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, Transit, best_within, ecg_evidence, learn_transit, no_evidence
+from caval.stages._sequence import best_sequence, kinds
 from caval.stages._signal import cut, fill, lowpass
 
 __all__ = ["anchors"]
@@ -73,9 +73,10 @@ def anchors(
     Returns
     -------
     DataFrame
-        ``beat, r_time_s, r_sd_s, rr_s, source, confidence``. `source` is ``fused`` when ECG and artery agree, else the one that shows
+        ``beat, r_time_s, r_sd_s, rr_s, source, confidence, kind``. `source` is ``fused`` when ECG and artery agree, else the one that shows
         the beat; `r_sd_s` is the standard deviation of the R time, from the noise around the complex for ECG beats and from the spread
-        of the transit time for arterial ones.
+        of the transit time for arterial ones. `kind` is ``normal``, ``premature`` (earlier than the running interval) or
+        ``premature_wide`` (early, and of another shape than the QRS of its minute; only an ECG shows it).
     """
     time = candidates["time_s"].to_numpy(float)
     is_foot = (candidates["detector"] == "upstroke").to_numpy()
@@ -99,18 +100,20 @@ def anchors(
             "rr_s": np.nan,
             "source": pool.source[chosen],
             "confidence": 1.0 / (1.0 + np.exp(-1.5 * pool.weight[chosen])),
+            "kind": kinds(pool.time_s[chosen], pool.odd[chosen]),
         }
     )
 
 
 @dataclass(frozen=True, eq=False)
 class _Pool:
-    """Candidates in time order with their weight (log-odds, roughly)."""
+    """Candidates in time order with their weight (log-odds, roughly); `odd` ones are of another shape than their minute's QRS."""
 
     time_s: Floats
     weight: Floats
     source: NDArray[np.object_]
     sd_s: Floats
+    odd: Bools
 
 
 def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
@@ -186,7 +189,7 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     artery_says = np.where(pulse >= 0, 2.0 - 8.0 * off_s, np.where(ripple >= 0, 0.6, -silence))
     # Where the ECG says little the upstroke says when: R is the upstroke less the transit time. So it is where a beat on time has a shape
     # of its own and another time than its pulse: the ECG is disturbed.
-    disturbed = (evidence.likeness < 0.8) & (since > _EARLY) & (off_s > _OFF_S)
+    disturbed = (evidence.likeness < ALIKE) & (since > _EARLY) & (off_s > _OFF_S)
     trust = np.maximum(evidence.quiet * ~disturbed, _ramp(evidence.likeness, 0.6, 0.85))
     by_foot = (pulse >= 0) & (trust < 0.5)
     events = np.where(by_foot, np.append(expected[~weak], 0.0)[pulse], events)
@@ -204,7 +207,8 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     source = np.concatenate([source, np.full(len(lone), "abp", dtype=object)])
     sd = np.concatenate([sd, spread[~explained]])
     order = np.argsort(time, kind="stable")
-    return _Pool(time[order], weight[order], source[order], sd[order])
+    odd = np.concatenate([(evidence.likeness < ALIKE) & (trust >= 0.5) & ~by_foot, np.zeros(len(lone), dtype=bool)])
+    return _Pool(time[order], weight[order], source[order], sd[order], odd[order])
 
 
 def _ecg_weight(votes: Floats, evidence: Evidence) -> Floats:
