@@ -53,11 +53,10 @@ _BAND_EXCESS = 2.8
 class Evidence:
     """What the ECG says of each event.
 
-    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's,
-    `tallness` its height over the usual one, `likeness` that to
-    the minute's QRS (correlation, at most 1), `standing` its height over that of the tallest event around it, of which it is a part or which is a
-    part of it (1 for one like the minute's QRS), `quiet` runs from 0 (the ECG around is as loud as a QRS) to 1. `quiet_at_s`/`quiet_level` give it
-    over time.
+    `time_s` is the R time and `sd_s` its standard deviation; `size` is the event's energy over the usual QRS's, `tallness` its height over
+    the usual one, `likeness` that to the minute's QRS (correlation, at most 1), `standing` its height over that of the tallest event around
+    it, whose part it may be (1 for one like the minute's QRS). `quiet` runs from 0 (the ECG around is as loud as a QRS, or rough) to 1;
+    `quiet_at_s`, `quiet_level` give it over time.
     """
 
     time_s: Floats
@@ -69,6 +68,11 @@ class Evidence:
     quiet: Floats
     quiet_at_s: Floats
     quiet_level: Floats
+
+    @property
+    def sure(self) -> Bools:
+        """Which events are QRS complexes beyond doubt, of the usual shape and size and in quiet."""
+        return (self.likeness > 0.8) & (self.quiet > 0.5) & (self.size > 0.4) & (self.size < 2.5)
 
 
 def no_evidence() -> tuple[Evidence, NDArray[np.int64]]:
@@ -124,6 +128,7 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
     around = best_within(events, height, events - _ONE_S, events + _ONE_S)[1]
     standing = np.where(height > 0, height / np.maximum(height[around], 1e-12), 1.0)
     keep = _unlike_neighbours(time, likeness)
+    keep = keep[(time[keep] > thin.start_s + 1 / rate) & (time[keep] < thin.stop_s - 2 / rate)]  # a tip beyond the end is not known
     time, sd, size, tallness, likeness, standing = (part[keep] for part in (time, sd, size, tallness, likeness, standing))
     return Evidence(time, sd, size, tallness, likeness, standing, np.interp(time, at_s, level), at_s, level), keep
 
@@ -296,7 +301,8 @@ def _roughness(cleaned: Signal) -> Signal:
     bend = bend[: len(bend) // group * group].reshape(-1, group)
     step_s = every * group / rate
     power = np.einsum("ij,ij->i", bend, bend) / group if len(bend) else np.zeros(1)
-    return Signal(np.sqrt(np.maximum(moving_mean(power, round(0.8 / step_s)), 0.0)), 1 / step_s, cleaned.start_s + first / rate + step_s / 2)
+    level = np.sqrt(np.maximum(moving_mean(power, round(0.8 / step_s)), 0.0))
+    return Signal(level, 1 / step_s, cleaned.start_s + first / rate + step_s / 2)
 
 
 def _quiet(
@@ -370,8 +376,7 @@ class Transit:
 
 def learn_transit(evidence: Evidence, feet: Floats, default_s: float) -> Transit:
     """Transit times from the sure complexes and the strong upstrokes after them."""
-    sure = (evidence.likeness > 0.8) & (evidence.quiet > 0.5) & (evidence.size > 0.4) & (evidence.size < 2.5)
-    r = np.sort(evidence.time_s[sure])
+    r = evidence.time_s[evidence.sure]
     place = np.searchsorted(feet, r + 0.05)
     r, place = r[place < len(feet)], place[place < len(feet)]
     after = feet[place] - r

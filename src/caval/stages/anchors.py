@@ -1,4 +1,4 @@
-"""Beats from the ECG and the arterial trace together.
+"""Beats from the ECG, the arterial and the venous trace together.
 
 Every detector's event is a candidate. What the ECG says of a candidate (size, likeness to the QRS complexes of the minute, quiet around
 it) and what the artery says (an upstroke a transit time later, or none) add up to its weight; the sequence of beats is the set of
@@ -21,9 +21,10 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, Transit, best_within, ecg_evidence, learn_transit, no_evidence
+from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, Transit, ecg_evidence, learn_transit, no_evidence
 from caval.stages._sequence import best_sequence, kinds
 from caval.stages._signal import cut, fill, lowpass
+from caval.stages._venous import venous_beats
 
 __all__ = ["anchors"]
 
@@ -56,7 +57,7 @@ _NOT_FILLED_S = 0.02
 
 @stage(name="anchors", gives=("beats",), margin_s=MARGIN_S)
 def anchors(
-    candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, *, transit_s: float = 0.20
+    candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, cvp: Signal | None = None, *, transit_s: float = 0.20
 ) -> pd.DataFrame:
     """Fuse the candidates of single-channel detectors into one sequence of beats.
 
@@ -66,6 +67,9 @@ def anchors(
         Events of the detectors: ``time_s`` (s), ``detector``; arterial upstrokes are those of the detector ``upstroke``.
     ecg, abp : Signal, optional
         The channels the candidates came from; without an ECG the beats are upstrokes less the transit time.
+    cvp : Signal, optional
+        The venous trace, a witness where the ECG says nothing and no artery pulses. With neither in the record its waves alone give beats,
+        whose R is known no better than to 0.06 s, and may be another's (see `caval.stages._venous`).
     transit_s : float
         Time from R to the foot of the arterial upstroke, seconds, until it can be learned (0.15 to 0.25 s to the radial artery is
         usual; common practice).
@@ -83,14 +87,17 @@ def anchors(
     feet = np.unique(time[is_foot]) if abp is not None else np.empty(0)
     of_ecg = ~is_foot & (ecg is not None)
     events, votes = _merge(time[of_ecg], candidates["detector"].to_numpy(object)[of_ecg])
-    if not len(feet) and not len(events):
-        return tables.empty("beats")
     strength = _strength(abp, feet) if abp is not None else np.empty(0)
     feet, strength = _without_dicrotic(feet, strength)
     strong = feet[strength > _WEAK]
     evidence, of = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
     votes = votes[of]
-    pool = _pool(votes, feet, strength, evidence, learn_transit(evidence, strong, transit_s))
+    transit = learn_transit(evidence, strong, transit_s)
+    pool = _pool(votes, feet, strength, evidence, transit)
+    if cvp is not None and _silent(evidence, strong, cvp).any():
+        pool = _with_venous(pool, cvp, evidence, strong, transit)
+    if not len(pool.time_s):
+        return tables.empty("beats")
     chosen = best_sequence(pool.time_s, pool.weight, *_usual_interval(pool))
     return pd.DataFrame(
         {
@@ -114,6 +121,31 @@ class _Pool:
     source: NDArray[np.object_]
     sd_s: Floats
     odd: Bools
+
+
+def _silent(evidence: Evidence, strong: Floats, cvp: Signal) -> Bools:
+    """At each half second of the stretch: whether neither ECG nor artery says anything."""
+    at_s = np.arange(cvp.start_s, cvp.stop_s, 0.5)
+    return (np.interp(at_s, evidence.quiet_at_s, evidence.quiet_level) < 0.5) & (_awake(strong, at_s) < 0.5)
+
+
+def _with_venous(pool: _Pool, cvp: Signal, evidence: Evidence, strong: Floats, transit: Transit) -> _Pool:
+    """The pool with what the venous trace shows; the ECG and the artery have the say where they say anything."""
+    known = np.concatenate([evidence.time_s[evidence.sure], strong - transit.at(strong)[0]])
+    known = np.sort(known)
+    known = known[np.diff(known, prepend=-np.inf) > _SAME_S]
+    venous = venous_beats(cvp, known)
+    heard = np.interp(venous.time_s, evidence.quiet_at_s, evidence.quiet_level)
+    weight = 2.5 * _ramp(venous.likeness, 0.5, 0.8) - 1.0 - 3.2 * heard - 3.2 * _awake(strong, venous.time_s)
+    count = len(weight)
+    parts = zip(
+        (pool.time_s, pool.weight, pool.source, pool.sd_s, pool.odd),
+        (venous.time_s, weight, np.full(count, "cvp", dtype=object), venous.sd_s, np.zeros(count, dtype=bool)),
+        strict=True,
+    )
+    time, weight, source, sd, odd = (np.concatenate(part) for part in parts)
+    order = np.argsort(time, kind="stable")
+    return _Pool(time[order], weight[order], source[order], sd[order], odd[order])
 
 
 def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
@@ -177,7 +209,8 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     expected = feet - delay
     weak = strength < _WEAK
     since, usual = _since(events, expected[~weak])
-    evidence = replace(evidence, size=np.where(since * np.sqrt(usual) > _T_OVER, np.maximum(evidence.size, _WIDE * evidence.tallness), evidence.size))
+    no_t = since * np.sqrt(usual) > _T_OVER
+    evidence = replace(evidence, size=np.where(no_t, np.maximum(evidence.size, _WIDE * evidence.tallness), evidence.size))
     ecg_says = _ecg_weight(votes, evidence)
     pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
     ripple = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
@@ -214,7 +247,8 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
 def _ecg_weight(votes: Floats, evidence: Evidence) -> Floats:
     """Log-odds of a QRS from the ECG alone: in quiet, size decides and any shape will do; in noise only the minute's shape counts."""
     big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -10.0, -5.0)
-    return evidence.quiet * (3.6 * big - 2.2) + (1 - evidence.quiet) * -2.6 + _shape_weight(evidence) - 2.0 * (1 - evidence.standing) + votes
+    any_shape = evidence.quiet * (3.6 * big - 2.2) - 2.6 * (1 - evidence.quiet) - 2.0 * (1 - evidence.standing)
+    return any_shape + _shape_weight(evidence) + votes
 
 
 def _shape_weight(evidence: Evidence) -> Floats:
