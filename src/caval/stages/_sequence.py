@@ -82,8 +82,8 @@ def kinds(time: Floats, odd: NDArray[np.bool_]) -> NDArray[np.object_]:
         return kind
     halves = 0.5 * (time[2:] - time[:-2])
     size = min(_NEIGHBOURS, len(halves))
-    middle = ndimage.median_filter(halves, size=size, mode="nearest")
-    spread = 1.4826 * ndimage.median_filter(np.abs(halves - middle), size=size, mode="nearest")
+    middle = ndimage.median_filter(halves, size=size, mode="reflect")
+    spread = 1.4826 * ndimage.median_filter(np.abs(halves - middle), size=size, mode="reflect")
     usual, vary = np.pad(middle, 1, mode="edge"), np.pad(spread, 1, mode="edge")
     interval = np.diff(time, prepend=np.nan)
     ahead = usual - interval

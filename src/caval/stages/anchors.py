@@ -209,7 +209,7 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     expected = feet - delay
     weak = strength < _WEAK
     since, usual = _since(events, expected[~weak])
-    no_t = since * np.sqrt(usual) > _T_OVER
+    no_t = np.isfinite(since) & (since * np.sqrt(usual) > _T_OVER)
     evidence = replace(evidence, size=np.where(no_t, np.maximum(evidence.size, _WIDE * evidence.tallness), evidence.size))
     ecg_says = _ecg_weight(votes, evidence)
     pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
