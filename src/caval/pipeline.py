@@ -32,7 +32,7 @@ DETECTOR_MARGIN_S = 10.0
 
 STAGES = ("anchors", "atrial", "quality", "waves", "measure", "delay", "rhythm")
 """Stages that run by default."""
-DETECTORS = ("qrs", "neurokit", "upstroke")
+DETECTORS = ("qrs", "upstroke")
 """Detectors whose candidates the anchors stage fuses by default."""
 
 Progress = Callable[[str, float], None]

@@ -15,7 +15,7 @@ __all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "clip_spans", "empty", "join
 
 SCHEMAS: dict[str, dict[str, str]] = {
     "candidates": {"time_s": "f8", "detector": "object"},
-    "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8"},
+    "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8", "kind": "object"},
     "atria": {"time_s": "f8", "beat": "i8", "coupled": "bool", "pr_s": "f8", "confidence": "f8"},
     "coupling": {"beat": "i8", "r_time_s": "f8", "p": "object", "pr_s": "f8", "confidence": "f8"},
     "rhythms": {"beat": "i8", "r_time_s": "f8", "rhythm": "object"},

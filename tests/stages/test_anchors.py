@@ -95,9 +95,9 @@ def test_an_ecg_lead_that_falls_off_costs_no_beat(drawn):
     agreement = match_events(drawn.r_times_s, result.beats["r_time_s"].to_numpy(), window_s=0.1)
     assert agreement.sensitivity >= 0.985
     assert agreement.precision >= 0.985
-    away = result.beats[(result.beats["r_time_s"] > 31) & (result.beats["r_time_s"] < 59)]
-    assert set(away["source"]) == {"abp"}
-    assert (away["r_sd_s"] > 0.004).all()
+    on, off = (result.beats[result.beats["r_time_s"].between(31, 59) == away] for away in (False, True))
+    assert set(off["source"]) == {"abp"}
+    assert off["r_sd_s"].min() > on["r_sd_s"].median()
 
 
 def test_a_beat_without_a_pulse_stays_while_the_ecg_is_quiet(drawn):
@@ -118,11 +118,13 @@ def test_without_an_ecg_the_artery_gives_the_beats(drawn):
     assert any("no ECG" in said for said in result.warnings)
 
 
-def test_with_neither_there_are_no_beats_and_a_reason(drawn):
-    result = caval.mark(_with(drawn.recording, ecg=None, abp=None))
-    assert len(result.beats) == 0
-    assert len(result.marks) == 0
-    assert any("no beats" in said for said in result.warnings)
+def test_with_nothing_that_beats_there_are_no_beats_and_a_reason(drawn):
+    noise = 8.0 + np.random.default_rng(2).standard_normal(120 * 125)
+    for cvp in (noise, np.full(120 * 125, 8.0)):
+        result = caval.mark(_with(drawn.recording, ecg=None, abp=None, cvp=cvp))
+        assert len(result.beats) == 0
+        assert len(result.marks) == 0
+        assert any("no beats" in said for said in result.warnings)
 
 
 @pytest.mark.parametrize("change", ["polarity", "scale", "offset", "artery_scale"])

@@ -1,4 +1,4 @@
-"""Beats from the ECG and the arterial trace together.
+"""Beats from the ECG, the arterial and the venous trace together.
 
 Every detector's event is a candidate. What the ECG says of a candidate (size, likeness to the QRS complexes of the minute, quiet around
 it) and what the artery says (an upstroke a transit time later, or none) add up to its weight; the sequence of beats is the set of
@@ -11,7 +11,7 @@ neighbours.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -21,13 +21,15 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import GRID_S, Evidence, ecg_evidence, no_evidence
-from caval.stages._sequence import best_sequence
+from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, Transit, ecg_evidence, learn_transit, no_evidence
+from caval.stages._sequence import best_sequence, kinds
 from caval.stages._signal import cut, fill, lowpass
+from caval.stages._venous import venous_beats
 
 __all__ = ["anchors"]
 
 Floats = NDArray[np.float64]
+Bools = NDArray[np.bool_]
 
 _SAME_S = 0.09
 """Events of two ECG detectors this close are one candidate."""
@@ -39,11 +41,23 @@ _REACH_S = 0.10
 """How far an upstroke may lie from R plus the transit time and still belong to it; a weak one may come as much later again."""
 _WEAK = 0.35
 """Share of the usual upstroke's slope below which an upstroke is weak: a premature beat's, or a dicrotic wave."""
+_EARLY, _VERY_EARLY = 0.8, 0.5
+"""Share of the usual interval below which a beat of odd shape, and one of the usual shape, may have no pulse: the ventricle had no time to
+fill (our choice)."""
+_UNSTEADY = 0.16
+"""Median deviation of the intervals, as a share of the usual one: fibrillation has 0.15 or more (a coefficient of variation of 0.22)."""
+_T_OVER = 0.42
+"""T is over this long after R, times the square root of the interval (Bazett, Heart 1920;7:353, from memory): what is tall then is no T."""
+_WIDE = 0.6
+"""A wide complex has so much less energy in the QRS band than a narrow one as tall (computed for one twice as wide)."""
+_OFF_S = 0.04
+_NOT_FILLED_S = 0.02
+"""A weak pulse's transit is this uncertain besides: the ventricle takes longer to open the valve."""
 
 
-@stage(name="anchors", gives=("beats",), margin_s=2 * GRID_S)
+@stage(name="anchors", gives=("beats",), margin_s=MARGIN_S)
 def anchors(
-    candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, *, transit_s: float = 0.20
+    candidates: pd.DataFrame, ecg: Signal | None = None, abp: Signal | None = None, cvp: Signal | None = None, *, transit_s: float = 0.20
 ) -> pd.DataFrame:
     """Fuse the candidates of single-channel detectors into one sequence of beats.
 
@@ -53,6 +67,9 @@ def anchors(
         Events of the detectors: ``time_s`` (s), ``detector``; arterial upstrokes are those of the detector ``upstroke``.
     ecg, abp : Signal, optional
         The channels the candidates came from; without an ECG the beats are upstrokes less the transit time.
+    cvp : Signal, optional
+        The venous trace, a witness where the ECG says nothing and no artery pulses. With neither in the record its waves alone give beats,
+        whose R is known no better than to 0.06 s, and may be another's (see `caval.stages._venous`).
     transit_s : float
         Time from R to the foot of the arterial upstroke, seconds, until it can be learned (0.15 to 0.25 s to the radial artery is
         usual; common practice).
@@ -60,22 +77,28 @@ def anchors(
     Returns
     -------
     DataFrame
-        ``beat, r_time_s, r_sd_s, rr_s, source, confidence``. `source` is ``fused`` when ECG and artery agree, else the one that shows
-        the beat; `r_sd_s` is the standard deviation of the R time, from the time resolution for ECG beats and from the spread
-        of the transit time for arterial ones.
+        ``beat, r_time_s, r_sd_s, rr_s, source, confidence, kind``. `source` is ``fused`` when ECG and artery agree, else the one that shows
+        the beat; `r_sd_s` is the standard deviation of the R time, from the noise around the complex for ECG beats and from the spread
+        of the transit time for arterial ones. `kind` is ``normal``, ``premature`` (earlier than the running interval) or
+        ``premature_wide`` (early, and of another shape than the QRS of its minute; only an ECG shows it).
     """
     time = candidates["time_s"].to_numpy(float)
     is_foot = (candidates["detector"] == "upstroke").to_numpy()
     feet = np.unique(time[is_foot]) if abp is not None else np.empty(0)
     of_ecg = ~is_foot & (ecg is not None)
     events, votes = _merge(time[of_ecg], candidates["detector"].to_numpy(object)[of_ecg])
-    if not len(feet) and not len(events):
-        return tables.empty("beats")
     strength = _strength(abp, feet) if abp is not None else np.empty(0)
     feet, strength = _without_dicrotic(feet, strength)
-    evidence = ecg_evidence(ecg, events, feet[strength > _WEAK], transit_s) if ecg is not None and len(events) else no_evidence(transit_s)
-    pool = _pool(events, votes, feet, strength, evidence)
-    chosen = best_sequence(pool.time_s, pool.weight, _usual_interval(pool))
+    strong = feet[strength > _WEAK]
+    evidence, of = ecg_evidence(ecg, events, strong) if ecg is not None and len(events) else no_evidence()
+    votes = votes[of]
+    transit = learn_transit(evidence, strong, transit_s)
+    pool = _pool(votes, feet, strength, evidence, transit)
+    if cvp is not None and _silent(evidence, strong, cvp).any():
+        pool = _with_venous(pool, cvp, evidence, strong, transit)
+    if not len(pool.time_s):
+        return tables.empty("beats")
+    chosen = best_sequence(pool.time_s, pool.weight, *_usual_interval(pool))
     return pd.DataFrame(
         {
             "beat": np.arange(len(chosen)),
@@ -84,33 +107,63 @@ def anchors(
             "rr_s": np.nan,
             "source": pool.source[chosen],
             "confidence": 1.0 / (1.0 + np.exp(-1.5 * pool.weight[chosen])),
+            "kind": kinds(pool.time_s[chosen], pool.odd[chosen]),
         }
     )
 
 
 @dataclass(frozen=True, eq=False)
 class _Pool:
-    """Candidates in time order with their weight (log-odds, roughly)."""
+    """Candidates in time order with their weight (log-odds, roughly); `odd` ones are of another shape than their minute's QRS."""
 
     time_s: Floats
     weight: Floats
     source: NDArray[np.object_]
     sd_s: Floats
+    odd: Bools
+
+
+def _silent(evidence: Evidence, strong: Floats, cvp: Signal) -> Bools:
+    """At each half second of the stretch: whether neither ECG nor artery says anything."""
+    at_s = np.arange(cvp.start_s, cvp.stop_s, 0.5)
+    return (np.interp(at_s, evidence.quiet_at_s, evidence.quiet_level) < 0.5) & (_awake(strong, at_s) < 0.5)
+
+
+def _with_venous(pool: _Pool, cvp: Signal, evidence: Evidence, strong: Floats, transit: Transit) -> _Pool:
+    """The pool with what the venous trace shows; the ECG and the artery have the say where they say anything."""
+    known = np.concatenate([evidence.time_s[evidence.sure], strong - transit.at(strong)[0]])
+    known = np.sort(known)
+    known = known[np.diff(known, prepend=-np.inf) > _SAME_S]
+    venous = venous_beats(cvp, known)
+    heard = np.interp(venous.time_s, evidence.quiet_at_s, evidence.quiet_level)
+    weight = 2.5 * _ramp(venous.likeness, 0.5, 0.8) - 1.0 - 3.2 * heard - 3.2 * _awake(strong, venous.time_s)
+    count = len(weight)
+    parts = zip(
+        (pool.time_s, pool.weight, pool.source, pool.sd_s, pool.odd),
+        (venous.time_s, weight, np.full(count, "cvp", dtype=object), venous.sd_s, np.zeros(count, dtype=bool)),
+        strict=True,
+    )
+    time, weight, source, sd, odd = (np.concatenate(part) for part in parts)
+    order = np.argsort(time, kind="stable")
+    return _Pool(time[order], weight[order], source[order], sd[order], odd[order])
 
 
 def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
-    """Events of all ECG detectors as one list; where several coincide the time of ``qrs`` stands. Votes count the other detectors."""
+    """Events of all ECG detectors as one list; where several coincide the time of ``qrs`` stands.
+
+    Votes, in log-odds: for what another detector saw too, against what it did not.
+    """
     own = np.sort(time[names == "qrs"])
     other = np.sort(time[names != "qrs"])
     if not len(own):
         own = other[np.diff(other, prepend=-np.inf) > _SAME_S]
-    votes = np.zeros(len(own))
+    votes = np.full(len(own), -0.25)
     if len(own) and len(other):
         at = _nearest(own, other)
         far = np.abs(own[at] - other) > _SAME_S
-        votes[np.unique(at[~far])] = 1.0
+        votes[np.unique(at[~far])] = 0.25
         lone = other[far][np.diff(other[far], prepend=-np.inf) > _SAME_S]
-        own, votes = np.concatenate([own, lone]), np.concatenate([votes, np.ones(len(lone))])
+        own, votes = np.concatenate([own, lone]), np.concatenate([votes, np.full(len(lone), 0.25)])
         order = np.argsort(own, kind="stable")
         own, votes = own[order], votes[order]
     return own, votes
@@ -148,59 +201,81 @@ def _without_dicrotic(feet: Floats, strength: Floats) -> tuple[Floats, Floats]:
     return feet[keep], strength[keep]
 
 
-def _pool(events: Floats, votes: Floats, feet: Floats, strength: Floats, evidence: Evidence) -> _Pool:
+def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, transit: Transit) -> _Pool:
     """Every candidate with its weight: ECG events, and upstrokes that no likely ECG event explains, set back by the transit time."""
-    transit = np.interp(feet, evidence.minute_s, evidence.transit_s)
-    expected = feet - transit
-    ecg_says = _ecg_weight(votes, evidence) if len(events) else np.empty(0)
+    events = evidence.time_s
+    delay, spread = transit.at(feet)
+    spread = np.hypot(spread, _NOT_FILLED_S * (strength < 0.6))
+    expected = feet - delay
     weak = strength < _WEAK
-    got_pulse, off_s = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
-    got_ripple, _ = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
-    has_foot = got_pulse | got_ripple
-    awake = _awake(feet[~weak], events)
-    artery_says = np.where(got_pulse, 2.0 - 8.0 * off_s, np.where(got_ripple, 0.6, -1.6 * awake))
+    since, usual = _since(events, expected[~weak])
+    no_t = np.isfinite(since) & (since * np.sqrt(usual) > _T_OVER)
+    evidence = replace(evidence, size=np.where(no_t, np.maximum(evidence.size, _WIDE * evidence.tallness), evidence.size))
+    ecg_says = _ecg_weight(votes, evidence)
+    pulse = _assign(events, ecg_says, expected[~weak], (_REACH_S, _REACH_S))
+    ripple = _assign(events, ecg_says, expected[weak], (0.5 * _REACH_S, 2.0 * _REACH_S))
+    # An early beat may have no pulse, one of the ventricle more easily: it contracts out of step. Likeness that is vague says nothing then.
+    clear = _ramp(evidence.likeness, 0.8, 0.95)
+    early = since < _EARLY - (_EARLY - _VERY_EARLY) * clear
+    silence = _awake(feet[~weak], events) * np.where(early, 0.5 + (1.0 - clear) * _shape_weight(evidence), 1.6)
+    off_s = np.abs(events - np.append(expected[~weak], 0.0)[pulse])
+    artery_says = np.where(pulse >= 0, 2.0 - 8.0 * off_s, np.where(ripple >= 0, 0.6, -silence))
+    # Where the ECG says little the upstroke says when: R is the upstroke less the transit time. So it is where a beat on time has a shape
+    # of its own and another time than its pulse: the ECG is disturbed.
+    disturbed = (evidence.likeness < ALIKE) & (since > _EARLY) & (off_s > _OFF_S)
+    trust = np.maximum(evidence.quiet * ~disturbed, _ramp(evidence.likeness, 0.6, 0.85))
+    by_foot = (pulse >= 0) & (trust < 0.5)
+    events = np.where(by_foot, np.append(expected[~weak], 0.0)[pulse], events)
+    sd = np.where(by_foot, np.append(spread[~weak], 0.0)[pulse], np.hypot(evidence.sd_s, 0.03 * (1.0 - trust)))
+    source = np.where(by_foot, "abp", np.where((pulse >= 0) | (ripple >= 0), "fused", "ecg")).astype(object)
+
     explained = np.zeros(len(feet), dtype=bool)
-    sure = events[ecg_says > _DOUBT] if len(events) else events
+    sure = np.sort(events[ecg_says > _DOUBT])
     if len(sure) and len(feet):
         explained = np.abs(sure[_nearest(sure, expected)] - expected) < _SAME_S
     lone, lone_strength = expected[~explained], strength[~explained]
-    heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level) if len(events) else np.zeros(len(lone))
+    heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level)
     time = np.concatenate([events, lone])
     weight = np.concatenate([ecg_says + artery_says, 2.8 * _ramp(lone_strength, 0.2, 0.6) - 1.0 - 3.2 * heard])
-    source = np.concatenate(
-        [np.where(has_foot, np.where(ecg_says > _DOUBT, "fused", "abp"), "ecg").astype(object), np.full(len(lone), "abp", dtype=object)]
-    )
-    spread = np.interp(time, evidence.minute_s, evidence.spread_s)
-    sd = np.where(source == "abp", np.maximum(spread, 0.01), 0.004)
+    source = np.concatenate([source, np.full(len(lone), "abp", dtype=object)])
+    sd = np.concatenate([sd, spread[~explained]])
     order = np.argsort(time, kind="stable")
-    return _Pool(time[order], weight[order], source[order], sd[order])
+    odd = np.concatenate([(evidence.likeness < ALIKE) & (trust >= 0.5) & ~by_foot, np.zeros(len(lone), dtype=bool)])
+    return _Pool(time[order], weight[order], source[order], sd[order], odd[order])
 
 
 def _ecg_weight(votes: Floats, evidence: Evidence) -> Floats:
     """Log-odds of a QRS from the ECG alone: in quiet, size decides and any shape will do; in noise only the minute's shape counts."""
-    big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -6.0, -3.0)
-    alike = np.clip(evidence.likeness, 0.0, 1.0) ** 3 * _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
-    in_quiet = 3.6 * big + 1.2 * alike - 2.2
-    in_noise = 4.2 * alike - 2.6
-    return evidence.quiet * in_quiet + (1 - evidence.quiet) * in_noise + 0.5 * (votes - 0.5)
+    big = _ramp(evidence.size, 0.25, 0.6) * _ramp(-evidence.size, -10.0, -5.0)
+    any_shape = evidence.quiet * (3.6 * big - 2.2) - 2.6 * (1 - evidence.quiet) - 2.0 * (1 - evidence.standing)
+    return any_shape + _shape_weight(evidence) + votes
+
+
+def _shape_weight(evidence: Evidence) -> Floats:
+    """What likeness to the minute's QRS adds; more in noise, where there is nothing else to go by."""
+    fits = _ramp(evidence.size, 0.3, 0.6) * _ramp(-evidence.size, -3.5, -1.8)
+    return np.clip(evidence.likeness, 0.0, 1.0) ** 3 * fits * (1.2 * evidence.quiet + 4.2 * (1 - evidence.quiet))
 
 
 def _ramp(value: Floats, low: float, high: float) -> Floats:
     return np.clip((value - low) / (high - low), 0.0, 1.0)
 
 
-def _assign(events: Floats, weight: Floats, expected: Floats, reach_s: tuple[float, float]) -> tuple[NDArray[np.bool_], Floats]:
-    """Give each upstroke to one event, the likelier first, no more than `reach_s` after or before its expected R.
-
-    Returns who got one and how far off it is (s).
+def _assign(events: Floats, weight: Floats, expected: Floats, reach_s: tuple[float, float]) -> NDArray[np.int64]:
+    """The upstroke that each event has, -1 for none: each upstroke goes to the likeliest and nearest event within `reach_s` after or
+    before its expected R.
     """
-    got, distance = np.zeros(len(events), dtype=bool), np.zeros(len(events))
+    has = np.full(len(events), -1)
     first, last = np.searchsorted(events, expected - reach_s[1]), np.searchsorted(events, expected + reach_s[0])
-    for low, high, place in zip(first, last, expected, strict=True):
-        if high > low:
-            best = low + int(np.argmax(weight[low:high] - 12.0 * np.abs(events[low:high] - place)))
-            got[best], distance[best] = True, abs(events[best] - place)
-    return got, distance
+    filled = np.flatnonzero(last > first)
+    if len(filled):
+        first, last = first[filled], last[filled]
+        index = first[:, None] + np.arange((last - first).max())
+        inside = index < last[:, None]
+        index = np.minimum(index, len(events) - 1)
+        worth = np.where(inside, weight[index] - 12.0 * np.abs(events[index] - expected[filled, None]), -np.inf)
+        has[first + worth.argmax(axis=1)] = filled
+    return has
 
 
 def _awake(feet: Floats, at_s: Floats) -> Floats:
@@ -211,11 +286,27 @@ def _awake(feet: Floats, at_s: Floats) -> Floats:
     return np.clip((count - 1) / 3.0, 0.0, 1.0)
 
 
-def _usual_interval(pool: _Pool) -> Floats:
-    """Running median interval between likely candidates, s, at every candidate."""
-    likely = pool.time_s[pool.weight > 0.5]
+def _since(events: Floats, expected: Floats) -> tuple[Floats, Floats]:
+    """Time from the beat of the last strong pulse to each event, as a share of the usual interval there, and that (s).
+
+    Infinite and 1 where no pulse says.
+    """
+    if len(expected) < 4:
+        return np.full(len(events), np.inf), np.ones(len(events))
+    usual = ndimage.median_filter(np.diff(expected), size=min(15, len(expected) - 1), mode="nearest")
+    before = np.searchsorted(expected, events - 0.5 * _SAME_S) - 1
+    period = usual[np.clip(before, 0, len(usual) - 1)]
+    return np.where(before >= 0, (events - expected[np.maximum(before, 0)]) / period, np.inf), np.where(before >= 0, period, 1.0)
+
+
+def _usual_interval(pool: _Pool) -> tuple[Floats, Floats]:
+    """Running median interval between likely candidates (s), and how steady they are (0 to 1), at every candidate."""
+    likely = pool.time_s[pool.weight > 1.0]
     if len(likely) < 4:
-        return np.full(len(pool.time_s), 0.85)
-    gaps = np.diff(likely)
-    usual = ndimage.median_filter(np.clip(gaps, 0.25, 2.5), size=min(15, len(gaps)), mode="nearest")
-    return np.interp(pool.time_s, likely[1:], usual)
+        return np.full(len(pool.time_s), 0.85), np.zeros(len(pool.time_s))
+    gaps = np.clip(np.diff(likely), 0.25, 2.5)
+    size = min(15, len(gaps))
+    usual = ndimage.median_filter(gaps, size=size, mode="nearest")
+    scatter = ndimage.median_filter(np.abs(gaps / usual - 1.0), size=size, mode="nearest")
+    steady = _ramp(-scatter, -_UNSTEADY, -0.5 * _UNSTEADY)
+    return np.interp(pool.time_s, likely[1:], usual), np.interp(pool.time_s, likely[1:], steady)
