@@ -338,7 +338,7 @@ def _march(rest: Floats, place: Floats, rate: float) -> tuple[NDArray[np.int64],
         pace = _pace(sign * seen, rate)
         scale = np.percentile(height, 100 * (1 - min(0.5, 0.5 * len(rest) / rate / pace / len(tops))))
         weight = np.clip(height / scale, 0.0, 1.5) - 0.6 - 0.4 * at_r  # what is left of a QRS complex looks like anything
-        chosen = best_sequence(tops / rate, weight, np.full(len(tops), pace))
+        chosen = best_sequence(tops / rate, weight, np.full(len(tops), pace), np.zeros(len(tops)))
         if len(chosen) < FEWEST or at_r[chosen].mean() > _AT_R or _locked(tops[chosen], place) > _LOCKED:
             continue
         usual = float(np.median(height[chosen]))
