@@ -51,7 +51,7 @@ _TOO_LOUD = 0.7
 _REACH_S = 0.05
 _FASTEST_S, _SLOWEST_S = 0.33, 1.7
 """Intervals between P waves that are tried when they march."""
-_LONE = 0.5
+_LONE = 0.35
 """P waves march when for each of them there are fewer than this many bumps half as large that are none."""
 _QRS_S, _QRS_SHARE, _AT_R = 0.10, 0.1, 0.5
 """Bumps this near R, or within this share of the interval, may be what is left of the QRS complex; when the last share of them lies there,

@@ -128,7 +128,7 @@ def waves(
     for wave in "vy":
         found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
     bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + _LATEST_CANNON_S, found.time("x") - 0.05)
-    found.seek("a", sharp[1.0], *bounds, rows=found.without_p(coupling))
+    found.seek("a", sharp[1.0], *bounds, rows=found.without_a(of_p))
     found.join("a", of_p)
     broad[1.0].take_near(found.time("a"))
     found.seek("c", sharp[1.0], np.fmax(r + 0.02, found.time("a") + 0.04), np.fmin(found.time("x"), found.time("v") - 0.05) - 0.02)
@@ -358,18 +358,13 @@ class _Found:
         v[hidden] = self.hits["v"].time[hidden] = np.nan
         return np.where(hidden, before, np.nan)
 
-    def without_p(self, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
-        """Beats whose a is sought at a fixed place from R: those that come in time and whose P the ECG does not tell.
+    def without_a(self, of_p: _Hits) -> NDArray[np.bool_]:
+        """Beats whose a is sought at a fixed place from R, where the picture has one: those that come in time and have none after a P.
 
-        Where most beats have no P, these are all: the picture has an a there only when the pressure itself shows one at a fixed place.
+        A lead may hide the P of a beat; the pressure decides whether there is an a.
         """
-        interval = self.interval[self.which]
-        in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * interval)
-        if coupling is None or not len(coupling):
-            return in_time
-        state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).fillna("unknown").to_numpy(object)
-        lone = np.array([p.atrial == "absent" for p in self.pictures])[self.which]
-        return in_time & ((state == "unknown") | ((state == "absent") & lone))
+        in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * self.interval[self.which])
+        return in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
 
     def join(self, wave: str, more: _Hits) -> None:
         """Add marks to those of a wave; the last before R stands for the beat."""
