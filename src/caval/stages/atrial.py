@@ -279,22 +279,23 @@ def _proven_bump(rows: Floats, pad: int, reach: int, *, most: int, least: float)
     `least`, and no wider than `most` at half its height.
     """
     median = np.median(rows, axis=0)
-    best, height = None, least
+    bumps = []
     for sign in (1.0, -1.0):
         upright = sign * median
-        tops, _ = signal.find_peaks(upright[pad:-pad])
-        for top in tops + pad:
+        for top in signal.find_peaks(upright[pad:-pad], prominence=least)[0] + pad:
             start = max(top - reach, 0)
             left = start + int(np.argmin(upright[start:top]))
             right = top + 1 + int(np.argmin(upright[top + 1 : top + 1 + reach]))
-            step = sign * rows[:, top] - np.maximum(sign * rows[:, left], sign * rows[:, right])
-            quarters = np.percentile(step, [25, 50, 75])
-            doubt = 1.2533 * (quarters[2] - quarters[0]) / 1.349 / len(rows) ** 0.5  # of a median, by the normal law
             flanks = upright[top] - max(upright[left], upright[right])
             width = int((upright[left : right + 1] > upright[top] - 0.5 * flanks).sum())
-            if quarters[1] > _PROVEN * doubt and flanks > height and width <= most:
-                best, height = int(top), flanks
-    return best
+            if flanks > least and width <= most:
+                bumps.append((flanks, int(top), left, right, sign))
+    for _, top, left, right, sign in sorted(bumps, reverse=True):
+        step = np.sort(sign * rows[:, top] - np.maximum(sign * rows[:, left], sign * rows[:, right]))
+        low, middle, high = (step[round(share * (len(step) - 1))] for share in (0.25, 0.5, 0.75))
+        if middle > _PROVEN * 1.2533 * (high - low) / 1.349 / len(rows) ** 0.5:  # the standard error of a median, by the normal law
+            return top
+    return None
 
 
 @dataclass(frozen=True, eq=False)
