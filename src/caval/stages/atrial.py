@@ -110,15 +110,17 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
         if view is None:
             continue  # T runs into the next QRS complex: a P could not be seen
         cell = ((k - 0.5) * KNOT_S, (k + 0.5) * KNOT_S)
-        picture = _Picture.of(view, r[alike])
+        rows = view.rows(r[alike])
+        quiet = _quiet(rows)
+        picture = _Picture.of(view, quiet)
         march = _marching(lead, r, near, cell) if picture is None or picture.doubtful else None
         if march is not None:
             marching += march
             state[here], sure[here] = "apart", 0.9
         elif picture is not None:
-            state[here], onset[here], sure[here] = _each(view, picture, r[here], r[alike])
+            state[here], onset[here], sure[here] = _each(view, picture, r[here], r[alike], rows)
         else:
-            state[here], sure[here] = _without(view, r[alike], r[here]), 0.8
+            state[here], sure[here] = _without(view, quiet, r[here]), 0.8
     onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
     atria = _atria(beats, r, onset, sure, np.round(np.array(marching).reshape(-1, 2), 6))
     return atria, _coupling(beats, state, r - onset, sure)
@@ -203,8 +205,14 @@ def _quiet(rows: Floats) -> Floats:
     rows = rows[np.isfinite(rows).all(axis=1)]
     if len(rows) < 2 * FEWEST:
         return rows
-    loud = np.sqrt((np.diff(rows, axis=1) ** 2).mean(axis=1))
-    return rows[loud <= _QUIET * np.percentile(loud, 25)]
+    loud = _roughness(rows)
+    return rows[loud <= _QUIET * np.sort(loud)[len(loud) // 4]]
+
+
+def _roughness(rows: Floats) -> Floats:
+    """Root mean square of the steps from sample to sample of each row."""
+    step = rows[:, 1:] - rows[:, :-1]
+    return np.asarray(np.sqrt(np.einsum("ij,ij->i", step, step) / step.shape[1]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -221,6 +229,8 @@ class _Picture:
         Of the values, so many are P alone: those after it lie below the foot of P and are QRS complex, which beats without a P have too.
     lead_s : float
         From the onset of the P to its top, seconds.
+    whole : bool
+        T does not reach into its left half.
     doubtful : bool
         Most beats hold more beside the P than P: P waves that march across a hump before R look like that.
     """
@@ -229,12 +239,13 @@ class _Picture:
     first: int
     own: int
     lead_s: float
+    whole: bool
     doubtful: bool
 
     @classmethod
-    def of(cls, view: _View, r: Floats) -> _Picture | None:
-        """The P that the beats at `r` prove; None when they prove none."""
-        rows, rate = _quiet(view.rows(r)), view.lead.rate
+    def of(cls, view: _View, rows: Floats) -> _Picture | None:
+        """The P that quiet rows of the view prove; None when they prove none."""
+        rate = view.lead.rate
         reach = round(0.1 * rate)
         if len(rows) < FEWEST:
             return None
@@ -249,9 +260,9 @@ class _Picture:
         values = values - values.mean()
         doubtful = float(np.median(np.linalg.norm(rest, axis=1))) > _TOO_LOUD * float(np.linalg.norm(values))
         rise_s = (top - _half_rise(median, top, reach)) / rate
-        whole = first >= view.pad  # T does not reach into its left half
+        whole = first >= view.pad
         lead_s = rise_s + (min(_ONSET_S, _ONSET_SHARE * rise_s) if whole else _ONSET_S)
-        return cls(values, first, _end(median, top, view.pad) - first, lead_s, doubtful)
+        return cls(values, first, _end(median, top, view.pad) - first, lead_s, whole, doubtful)
 
 
 def _end(median: Floats, top: int, pad: int) -> int:
@@ -344,9 +355,9 @@ class _View:
         return self.lead.start_s + (self.lead.index(r) - self.before - self.pad + index) / self.lead.rate
 
 
-def _each(view: _View, picture: _Picture, r: Floats, alike: Floats) -> tuple[NDArray, Floats, Floats]:
-    """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are R of beats like those
-    of the picture, `r` among them: they show whether P is still there."""
+def _each(view: _View, picture: _Picture, r: Floats, alike: Floats, shown: Floats) -> tuple[NDArray, Floats, Floats]:
+    """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are the R that the picture
+    was sought among and `shown` their rows: they show whether P is still there."""
     rate, p, best = view.lead.rate, picture.values, picture.first
     size = float(np.linalg.norm(p))
     rows = view.rows(r)
@@ -362,49 +373,49 @@ def _each(view: _View, picture: _Picture, r: Floats, alike: Floats) -> tuple[NDA
     at = score.argmax(axis=1)
     of = np.arange(len(r))
     alike_p, amount = along[of, at] / norms[of, at], along[of, at] / size
-    still, gone = _nearby(view, picture, r, alike)
+    still, gone = _nearby(picture, r, alike, shown)
     has = (alike_p > _ALIKE) & (amount > 0.4) & (amount < 2.5) & ~outside & still
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
-    silent = (noise > _TOO_LOUD) & ~gone | outside
+    silent = (noise > _TOO_LOUD) & ~gone | outside | (not picture.whole)
     state = np.where(has, "coupled", np.where(silent, "unknown", "absent")).astype(object)
     onset = view.time(r, best + lags[at] + _parabola(score, at) + len(p) // 2) - picture.lead_s
     sure = np.where(has, np.clip(alike_p, 0.0, 1.0), 1.0 - np.clip(noise / 2, 0.0, 0.9))
     return state, np.where(has, onset, np.nan), sure
 
 
-def _nearby(view: _View, picture: _Picture, r: Floats, alike: Floats) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+def _nearby(picture: _Picture, r: Floats, alike: Floats, shown: Floats) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Whether the beats around each R still hold the picture's P at its place, and whether they surely do not.
 
     At its place, not where they look most like it: what is sought is found anywhere. By the median of what each of the beats around holds
-    of it; surely not where that lies two of its standard errors below.
+    of it; surely not where that lies two of its standard errors below. Where T reaches into P, the picture stands: this would speak of T.
     """
-    rows = view.rows(alike)[:, picture.first : picture.first + picture.own]
-    p = signal.detrend(picture.values[: picture.own])  # the end of T is a slope, which moves with the interval
-    amount = rows @ p / (p @ p)
+    p = picture.values[: picture.own]
+    slope = np.arange(len(p)) - (len(p) - 1) / 2
+    p = p - p.mean() - slope * (slope @ p) / (slope @ slope)  # the end of T is a slope, which moves with the interval
+    amount = shown[:, picture.first : picture.first + picture.own] @ p / (p @ p)
     known = np.isfinite(amount)
     amount, place = amount[known], alike[known]
-    if len(amount) < _LOCAL:
+    if len(amount) < _LOCAL or not picture.whole:
         return np.ones(len(r), dtype=bool), np.zeros(len(r), dtype=bool)
-    around = np.lib.stride_tricks.sliding_window_view(amount, _LOCAL)
-    low, middle, high = np.percentile(around, [25, 50, 75], axis=1)
+    first = np.clip(_nearest(place, r) - _LOCAL // 2, 0, len(amount) - _LOCAL)
+    around = np.sort(amount[first[:, None] + np.arange(_LOCAL)], axis=1)
+    low, middle, high = (around[:, round(share * (_LOCAL - 1))] for share in (0.25, 0.5, 0.75))
     doubt = 1.2533 * (high - low) / 1.349 / _LOCAL**0.5
-    window = np.clip(_nearest(place, r) - _LOCAL // 2, 0, len(around) - 1)
-    return middle[window] > _LOCAL_SHARE, middle[window] + 2 * doubt[window] < _LOCAL_SHARE
+    return middle > _LOCAL_SHARE, middle + 2 * doubt < _LOCAL_SHARE
 
 
-def _without(view: _View, alike: Floats, r: Floats) -> NDArray[np.object_]:
+def _without(view: _View, quiet: Floats, r: Floats) -> NDArray[np.object_]:
     """What beats show that show no P: ``absent`` where a small usual P would have been proven, ``unknown`` where it would not."""
-    rows = _quiet(view.rows(alike))
+    state = np.full(len(r), "unknown", dtype=object)
     half = round(0.5 * _P_WIDTH_S * view.lead.rate)
-    if len(rows) < FEWEST or rows.shape[1] <= 2 * half:
-        return np.full(len(r), "unknown", dtype=object)
-    step = rows[:, half:-half] - np.maximum(rows[:, : -2 * half], rows[:, 2 * half :])
-    low, high = np.percentile(step, [25, 75], axis=0)
-    least = _PROVEN * 1.2533 * float(np.median(high - low)) / 1.349 / len(rows) ** 0.5
-    state = np.full(len(r), "absent" if least < _USUAL_P * view.qrs else "unknown", dtype=object)
-    own = view.rows(r)
-    loud = (np.diff(own, axis=1) ** 2).mean(axis=1)
-    state[~(loud < _LOUD_BEAT**2 * np.median((np.diff(rows, axis=1) ** 2).mean(axis=1)))] = "unknown"
+    if len(quiet) < FEWEST or view.length < 2 * half:
+        return state  # T leaves no room for a P
+    step = quiet[:, half:-half] - np.maximum(quiet[:, : -2 * half], quiet[:, 2 * half :])
+    ordered = np.sort(step, axis=0)
+    spread = ordered[round(0.75 * (len(step) - 1))] - ordered[round(0.25 * (len(step) - 1))]
+    least = _PROVEN * 1.2533 * float(np.median(spread)) / 1.349 / len(quiet) ** 0.5
+    if least < _USUAL_P * view.qrs:
+        state[_roughness(view.rows(r)) < _LOUD_BEAT * np.median(_roughness(quiet))] = "absent"
     return state
 
 
