@@ -53,6 +53,8 @@ _QUIET = 1.5
 """Roughness, over that of the quietest quarter, up to which a beat takes part in the picture."""
 _LOCAL, _LOCAL_SHARE = 15, 0.5
 """Beats that must hold, by their median, this share of the picture's P: a rhythm may begin within the two minutes of a picture."""
+_UNEVEN = 0.09
+"""Median change of successive intervals over the median interval from which they are uneven, as in the rhythm stage."""
 _USUAL_P = 0.1
 """Height over that of the QRS complex of a small usual P (common practice). Where none could have been proven, its lack says nothing."""
 _SPIKE, _SPIKE_S = 0.15, 0.004
@@ -100,6 +102,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
     state = np.full(len(r), "unknown", dtype=object)
     onset, sure = np.full(len(r), np.nan), np.zeros(len(r))
     marching: list[tuple[float, float]] = []
+    uneven = _uneven(r)
     for k in range(int(np.floor(r[0] / KNOT_S)), int(np.ceil(r[-1] / KNOT_S)) + 1):
         here = np.flatnonzero((r >= (k - 0.5) * KNOT_S) & (r < (k + 0.5) * KNOT_S))
         near = np.flatnonzero(np.abs(r - k * KNOT_S) <= NEIGHBOURS_S)
@@ -118,7 +121,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
             marching += march
             state[here], sure[here] = "apart", 0.9
         elif picture is not None:
-            state[here], onset[here], sure[here] = _each(view, picture, r[here], r[alike], rows)
+            state[here], onset[here], sure[here] = _each(view, picture, r[here], uneven[here], r[alike], rows)
         else:
             state[here], sure[here] = _without(view, quiet, r[here]), 0.8
     onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
@@ -182,6 +185,13 @@ def _hat(rate: float) -> Floats:
     bump = np.exp(-0.5 * (time / (0.25 * _P_WIDTH_S)) ** 2)
     bump -= bump.mean()
     return np.asarray(bump / np.linalg.norm(bump))
+
+
+def _uneven(r: Floats) -> NDArray[np.bool_]:
+    """Beats around which the intervals change from one to the next as they do in fibrillation."""
+    interval = np.diff(r, prepend=2 * r[0] - r[1])
+    change, usual = (ndimage.median_filter(x, _LOCAL, mode="nearest") for x in (np.abs(np.diff(interval, prepend=interval[0])), interval))
+    return np.asarray(change > _UNEVEN * usual)
 
 
 def _alike(normal: NDArray[np.bool_], near: NDArray[np.int64]) -> NDArray[np.int64]:
@@ -355,7 +365,9 @@ class _View:
         return self.lead.start_s + (self.lead.index(r) - self.before - self.pad + index) / self.lead.rate
 
 
-def _each(view: _View, picture: _Picture, r: Floats, alike: Floats, shown: Floats) -> tuple[NDArray, Floats, Floats]:
+def _each(
+    view: _View, picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+) -> tuple[NDArray, Floats, Floats]:
     """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are the R that the picture
     was sought among and `shown` their rows: they show whether P is still there."""
     rate, p, best = view.lead.rate, picture.values, picture.first
@@ -373,7 +385,7 @@ def _each(view: _View, picture: _Picture, r: Floats, alike: Floats, shown: Float
     at = score.argmax(axis=1)
     of = np.arange(len(r))
     alike_p, amount = along[of, at] / norms[of, at], along[of, at] / size
-    still, gone = _nearby(picture, r, alike, shown)
+    still, gone = _nearby(picture, r, uneven, alike, shown)
     has = (alike_p > _ALIKE) & (amount > 0.4) & (amount < 2.5) & ~outside & still
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
     silent = (noise > _TOO_LOUD) & ~gone | outside | (not picture.whole)
@@ -383,11 +395,14 @@ def _each(view: _View, picture: _Picture, r: Floats, alike: Floats, shown: Float
     return state, np.where(has, onset, np.nan), sure
 
 
-def _nearby(picture: _Picture, r: Floats, alike: Floats, shown: Floats) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+def _nearby(
+    picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Whether the beats around each R still hold the picture's P at its place, and whether they surely do not.
 
     At its place, not where they look most like it: what is sought is found anywhere. By the median of what each of the beats around holds
-    of it; surely not where that lies two of its standard errors below. Where T reaches into P, the picture stands: this would speak of T.
+    of it; where intervals are uneven, as in fibrillation, three quarters of the beats must hold half as much. Surely not where the median
+    lies two of its standard errors below. Where T reaches into P, the picture stands: this would speak of T.
     """
     p = picture.values[: picture.own]
     slope = np.arange(len(p)) - (len(p) - 1) / 2
@@ -401,7 +416,7 @@ def _nearby(picture: _Picture, r: Floats, alike: Floats, shown: Floats) -> tuple
     around = np.sort(amount[first[:, None] + np.arange(_LOCAL)], axis=1)
     low, middle, high = (around[:, round(share * (_LOCAL - 1))] for share in (0.25, 0.5, 0.75))
     doubt = 1.2533 * (high - low) / 1.349 / _LOCAL**0.5
-    return middle > _LOCAL_SHARE, middle + 2 * doubt < _LOCAL_SHARE
+    return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + 2 * doubt < _LOCAL_SHARE
 
 
 def _without(view: _View, quiet: Floats, r: Floats) -> NDArray[np.object_]:
