@@ -12,16 +12,18 @@ from caval.recording import Signal
 from caval.stages._signal import Thin, bandpass, cut, moving_mean, refine
 from caval.stages.detect import QRS_BAND_HZ, clean_ecg, qrs_energy, thinned
 
-__all__ = ["ALIKE", "GRID_S", "MARGIN_S", "Evidence", "Transit", "best_within", "ecg_evidence", "learn_transit", "no_evidence"]
+__all__ = ["ALIKE", "GRID_S", "LEARN_S", "MARGIN_S", "Evidence", "Transit", "best_within", "ecg_evidence", "learn_transit", "no_evidence"]
 
 Floats = NDArray[np.float64]
 Bools = NDArray[np.bool_]
 
 GRID_S = 60.0
-"""Each minute of the record learns from itself and the minutes before and after it."""
+LEARN_S = 30.0
+"""Each minute of the record learns from itself and so much before and after it."""
 SETTLE_S = 10.0
-"""Beyond those, what filters and running windows see."""
-MARGIN_S = GRID_S + SETTLE_S
+"""What filters and running windows see beyond those."""
+MARGIN_S = GRID_S + LEARN_S + SETTLE_S
+"""The transit of a block's last minute is learned from R times of the next, and those lie on the picture of that whole minute."""
 
 _SILENCE_S = 5.0
 _HALF_PICTURE_S = 0.064
@@ -104,7 +106,7 @@ def ecg_evidence(ecg: Signal, events: Floats, feet: Floats) -> tuple[Evidence, N
     roughness = _roughness(cleaned)
     rough_at_s = roughness.time_s
     for i, k in enumerate(cells):
-        low, first, last, high = np.searchsorted(events, GRID_S * np.array([k - 1, k, k + 1, k + 2]))
+        low, first, last, high = np.searchsorted(events, np.array([k * GRID_S - LEARN_S, k * GRID_S, (k + 1) * GRID_S, (k + 1) * GRID_S + LEARN_S]))
         if high == low:
             continue
         near, here = slice(low, high), slice(first, last)
@@ -386,7 +388,7 @@ def learn_transit(evidence: Evidence, feet: Floats, default_s: float) -> Transit
     first, last = (int(np.floor(t / GRID_S + 1e-9)) for t in (min(ends), max(ends)))
     minutes = np.tile([default_s, _DEFAULT_SPREAD_S, _DEFAULT_SPREAD_S], (last - first + 1, 1))
     for i in range(len(minutes)):
-        low, high = np.searchsorted(r, GRID_S * (first + i + np.array([-1, 2])))
+        low, high = np.searchsorted(r, GRID_S * (first + i + np.array([0, 1])) + LEARN_S * np.array([-1, 1]))
         if high - low >= _LEAST_BEATS:
             some = after[low:high]
             middle = np.median(some)
