@@ -43,7 +43,7 @@ class VenousBeats:
 
 
 def venous_beats(cvp: Signal, known_s: Floats) -> VenousBeats:
-    """Beats that the venous trace shows, minute by minute, from a picture of three minutes.
+    """Beats that the venous trace shows, minute by minute, from a picture of it and half a minute on either side.
 
     `known_s` are R times of sure beats; a minute that has at least eight of them around takes its picture from them.
     """
