@@ -81,7 +81,7 @@ def fails(capsys: pytest.CaptureFixture[str], folder: Path, *argv: str | Path) -
 
 def test_files_of_an_edf_record(marked: Path) -> None:
     assert sorted(p.name for p in marked.iterdir()) == [
-        "rec.png", "rec_beats.parquet", "rec_marked.edf", "rec_marks.parquet", "rec_run.json", "rec_spans.parquet",
+        "rec.png", "rec_atria.parquet", "rec_beats.parquet", "rec_marked.edf", "rec_marks.parquet", "rec_run.json", "rec_spans.parquet",
     ]
 
 
@@ -127,7 +127,7 @@ def test_the_marked_edf_holds_the_signals_and_the_marks(marked: Path, edf: Path)
 def test_files_of_a_wfdb_record_by_its_bare_name_with_csv(wfdb: Path, tmp_path: Path) -> None:
     assert cli.main(["mark", str(wfdb.with_suffix("")), "--out", str(tmp_path), "--table", "csv", "--quiet"]) == 0
     assert sorted(p.name for p in tmp_path.iterdir()) == [
-        "rec.cvp", "rec.png", "rec_beats.csv", "rec_marks.csv", "rec_run.json", "rec_spans.csv",
+        "rec.cvp", "rec.png", "rec_atria.csv", "rec_beats.csv", "rec_marks.csv", "rec_run.json", "rec_spans.csv",
     ]
     assert tuple(pd.read_csv(tmp_path / "rec_beats.csv").columns[: len(tables.BEAT_COLUMNS)]) == tables.BEAT_COLUMNS
 

@@ -9,7 +9,7 @@ import pandas as pd
 
 from caval.errors import FileError, InputError
 from caval.track import Track
-from caval.vocabulary import NOTE_CODE
+from caval.vocabulary import NOTE_CODE, RHYTHM_CODE, RHYTHMS, parse_text
 from caval_wfdb.codec import decode, encode
 
 __all__ = ["SYMBOLS", "TRACK_ENDING", "read_annotations", "track_bytes"]
@@ -96,7 +96,8 @@ def track_bytes(track: Track, ticks_per_s: float) -> bytes:
     """
     if not (np.isfinite(track.onset_s).all() and np.isfinite(track.duration_s).all()):
         raise InputError("an annotation has no finite time; WFDB needs a sample number for each")
-    is_span = track.duration_s > 0
+    is_rhythm = np.array([_rhythm_string(text) != "" for text in track.texts] + [False])[track.code]
+    is_span = (track.duration_s > 0) & ~is_rhythm  # a rhythm lasts until the next
     symbol = track.extra["symbol"].astype(str) if "symbol" in track.extra else np.repeat("", len(track))
     kind, kinds = pd.factorize(pd.MultiIndex.from_arrays([symbol, track.code, is_span]))
     forms = [_form(sign, track.texts[code], is_span=spans) for sign, code, spans in kinds]
@@ -120,12 +121,20 @@ def track_bytes(track: Track, ticks_per_s: float) -> bytes:
     return encode(columns, ticks_per_s)
 
 
+def _rhythm_string(text: str) -> str:
+    """WFDB rhythm string of one of our rhythm texts, empty for others."""
+    said = parse_text(text)
+    return RHYTHMS[said[2]].wfdb if said is not None and said[0] == "rhythm" else ""
+
+
 def _form(symbol: str, text: str, *, is_span: bool) -> tuple[int, str, str]:
     """Code of an annotation, and its text where it begins and where it ends."""
     if is_span:
         return NOTE_CODE, text + BEGIN, text + END
     if not symbol and (text in BEAT_SYMBOLS or text.startswith("+ (")):
         symbol = text[0]
+    if _rhythm_string(text):
+        return RHYTHM_CODE, _rhythm_string(text), ""
     code = _CODES.get(symbol, NOTE_CODE)
     word = text if code == NOTE_CODE else "" if text == symbol else text.removeprefix(f"{symbol} ")
     return code, word, word

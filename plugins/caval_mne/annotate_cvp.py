@@ -49,7 +49,8 @@ def annotate_cvp(
     Returns
     -------
     annot : instance of Annotations
-        ``CVP/a``, ``CVP/c``, … with duration 0, and ``BAD_CVP/flat`` and so on, every one with the ``ch_names`` of its channel.
+        ``CVP/a``, ``CVP/c``, … with duration 0, and ``BAD_CVP/flat`` and so on, every one with the ``ch_names`` of its channel;
+        ``RHYTHM/sinus`` and so on for the stretches of each rhythm, which belong to all channels.
         ``orig_time`` is the ``meas_date`` of `raw`, so ``raw.set_annotations(raw.annotations + annot)`` puts them in place, also when
         `raw` is cropped.
 

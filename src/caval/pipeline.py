@@ -2,7 +2,7 @@
 
 Blocks lie on a fixed grid from the start of the record, so the same record gives the same rows however it is run::
 
-    core     |── 600 s ──|── 600 s ──|── …      a row belongs to the block whose core holds its time
+    core     |── 1800 s ─|── 1800 s ─|── …      a row belongs to the block whose core holds its time
     read   ──margin──|core|──margin──           what a stage sees of the signals and of the tables given so far
 """
 
@@ -24,13 +24,13 @@ from caval.roles import PRESSURE_ROLES, assign_roles
 
 __all__ = ["BLOCK_S", "DETECTORS", "STAGES", "Pipeline", "Progress"]
 
-BLOCK_S = 600.0
-"""Core of a block, seconds: ten minutes of three channels are a few MB. A multiple of DETECTOR_GRID_S."""
+BLOCK_S = 1800.0
+"""Core of a block, seconds: half an hour of three channels is some 10 MB, and the margins cost little. A multiple of DETECTOR_GRID_S."""
 DETECTOR_GRID_S = 60.0
 """Detectors with thresholds of their own see one such stretch at a time, so that no threshold depends on the block."""
 DETECTOR_MARGIN_S = 10.0
 
-STAGES = ("anchors", "quality", "waves", "measure")
+STAGES = ("anchors", "atrial", "quality", "waves", "measure", "delay", "rhythm")
 """Stages that run by default."""
 DETECTORS = ("qrs", "upstroke")
 """Detectors whose candidates the anchors stage fuses by default."""
@@ -63,7 +63,7 @@ class Pipeline:
     >>> import caval
     >>> tables = caval.Pipeline().run(caval.demo_recording(minutes=0.5))
     >>> sorted(tables)
-    ['beats', 'candidates', 'marks', 'readings', 'spans']
+    ['atria', 'beats', 'candidates', 'coupling', 'delay', 'marks', 'readings', 'rhythms', 'spans']
     """
 
     stages: Sequence[str] = STAGES

@@ -26,6 +26,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Result"]
 
+_NAMED = ("beats", "marks", "spans", "readings", "coupling", "atria", "rhythms", "delay")
+"""Tables that the result, or the beat table, takes up."""
+
 
 @dataclass(frozen=True, eq=False)
 class Result:
@@ -67,12 +70,12 @@ class Result:
         units: Mapping[str, str],
     ) -> Result:
         """The result of a pipeline's tables."""
-        table = {name: done.get(name, tables.empty(name)) for name in ("beats", "marks", "spans", "readings")}
+        table = {name: done.get(name, tables.empty(name)) for name in _NAMED}
         renumber = dict(zip(table["beats"]["beat"], range(len(table["beats"])), strict=True))
-        for name in ("beats", "marks", "readings"):
+        for name in ("beats", "marks", "readings", "coupling", "atria", "rhythms"):
             kept = table[name][table[name]["beat"].isin(renumber)]
             table[name] = kept.assign(beat=kept["beat"].map(renumber).astype("int64")).reset_index(drop=True)
-        beats = tables.beat_table(table["beats"], table["marks"], table["readings"])
+        beats = tables.beat_table(table["beats"], table["marks"], table["readings"], table["coupling"], table["rhythms"])
         warnings = _statements(recording, roles, beats, table["marks"], table["spans"])
         run = {
             "program": "caval",
@@ -85,7 +88,7 @@ class Result:
             "stages": [pipeline.choose.get(s, s) for s in pipeline.stages],
             "detectors": list(pipeline.detectors),
             "settings": pipeline.settings_used(),
-            "delay_s": None,
+            **_delay(table["delay"]),
             "counts": {
                 "beats": len(beats),
                 "usable_beats": int(beats["usable"].sum()),
@@ -96,13 +99,16 @@ class Result:
             "notice": "Research software, not a medical device.",
         }
         others = {k: v for k, v in done.items() if k not in (*table, "candidates")}
+        others |= {"atria": table["atria"]} if "atria" in done else {}
         return cls(recording, dict(roles), beats, table["marks"], table["spans"], others, run, warnings)
 
     @property
     def track(self) -> Track:
-        """Our marks and spans as an annotation track."""
+        """Our marks, spans and rhythms as an annotation track."""
         channels = {label: i for i, label in reversed(list(enumerate(self.recording.labels)))}
-        return Track.from_tables(self.marks, self.spans, channels=channels, roles=self.roles)
+        return Track.from_tables(
+            self.marks, self.spans, channels=channels, roles=self.roles, rhythms=tables.rhythm_stretches(self.beats)
+        )
 
     def plot(self) -> Figure:
         """The figure of the record: a strip with marks, the median beat, the trend."""
@@ -158,6 +164,15 @@ class Result:
             _write_json({**self.run, **_fingerprints(self.recording)}, folder / f"{stem}_run.json")
 
         return write_all(directory, make, force=force, never=self.recording.files)
+
+
+def _delay(rows: pd.DataFrame) -> dict[str, Any]:
+    """The delay of the whole record: the median over its parts, with their uncertainty, which is that of hearts and not of beats."""
+    if not len(rows):
+        return {"delay_s": None, "delay_sd_s": None, "delay_basis": None, "p_a_s": None, "r_c_s": None}
+    middle = {name: rows[name].median() for name in ("delay_s", "delay_sd_s", "p_a_s", "r_c_s")}
+    said = {name: None if pd.isna(value) else round(float(value), 4) for name, value in middle.items()}
+    return {**said, "delay_basis": str(rows["basis"].mode().iloc[0])}
 
 
 def _statements(

@@ -11,11 +11,17 @@ from numpy.typing import NDArray
 from caval.errors import InputError
 from caval.vocabulary import WAVES
 
-__all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "clip_spans", "empty", "join_blocks", "overlaps", "time_column"]
+__all__ = ["BEAT_COLUMNS", "SCHEMAS", "beat_table", "clip_spans", "empty", "join_blocks", "overlaps", "rhythm_stretches", "time_column"]
 
 SCHEMAS: dict[str, dict[str, str]] = {
     "candidates": {"time_s": "f8", "detector": "object"},
     "beats": {"beat": "i8", "r_time_s": "f8", "r_sd_s": "f8", "rr_s": "f8", "source": "object", "confidence": "f8", "kind": "object"},
+    "atria": {"time_s": "f8", "beat": "i8", "coupled": "bool", "pr_s": "f8", "confidence": "f8"},
+    "coupling": {"beat": "i8", "r_time_s": "f8", "p": "object", "pr_s": "f8", "confidence": "f8"},
+    "rhythms": {"beat": "i8", "r_time_s": "f8", "rhythm": "object"},
+    "delay": {
+        "time_s": "f8", "delay_s": "f8", "delay_sd_s": "f8", "p_a_s": "f8", "p_a_n": "i8", "r_c_s": "f8", "r_c_n": "i8", "basis": "object",
+    },
     "marks": {"time_s": "f8", "mark": "object", "beat": "i8", "pressure_mmhg": "f8", "confidence": "f8", "state": "object"},
     "spans": {"onset_s": "f8", "duration_s": "f8", "kind": "object", "channel": "object", "detail": "object"},
     "readings": {"beat": "i8", "r_time_s": "f8", "usable": "bool", "reason": "object", "x_pre_mmhg": "f8", "mean_mmhg": "f8"},
@@ -98,6 +104,18 @@ def _merge_spans(spans: pd.DataFrame) -> pd.DataFrame:
     return pd.concat(merged).sort_values(["onset_s", "channel", "kind"], kind="stable", ignore_index=True)
 
 
+def rhythm_stretches(beats: pd.DataFrame) -> pd.DataFrame:
+    """Stretches of one rhythm: ``onset_s, duration_s, rhythm``, from its first R to the first of the next; early beats end none."""
+    named = beats[~beats["rhythm"].isin(["", "ectopic"])]
+    if not len(named):
+        return pd.DataFrame({"onset_s": pd.Series(dtype="f8"), "duration_s": pd.Series(dtype="f8"), "rhythm": pd.Series(dtype="object")})
+    word, time = named["rhythm"].to_numpy(object), named["r_time_s"].to_numpy(float)
+    first = np.flatnonzero(np.concatenate([[True], word[1:] != word[:-1]]))
+    onset = time[first]
+    end = np.concatenate([onset[1:], [float(beats["r_time_s"].iloc[-1])]])
+    return pd.DataFrame({"onset_s": onset, "duration_s": end - onset, "rhythm": word[first]})
+
+
 def overlaps(starts_s: NDArray, stops_s: NDArray, spans: pd.DataFrame) -> NDArray[np.int64]:
     """For each interval, the row number of the first span that overlaps it, -1 for none. Spans may overlap one another."""
     first = np.full(len(starts_s), -1, dtype=np.int64)
@@ -108,8 +126,14 @@ def overlaps(starts_s: NDArray, stops_s: NDArray, spans: pd.DataFrame) -> NDArra
     return first
 
 
-def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame | None) -> pd.DataFrame:
-    """The beat table of the contract from what is known: beats, the marks (the truth), and the readings of each beat.
+def beat_table(
+    beats: pd.DataFrame,
+    marks: pd.DataFrame,
+    readings: pd.DataFrame | None,
+    coupling: pd.DataFrame | None = None,
+    rhythms: pd.DataFrame | None = None,
+) -> pd.DataFrame:
+    """The beat table of the contract from what is known: beats, the marks (the truth), the readings, P and rhythm of each beat.
 
     A wave without a mark is ``absent`` in a usable beat and ``unusable`` in another; its time and pressure are NaN. Of several marks
     of one wave in a beat the last before R counts for a, the surest for the others.
@@ -118,7 +142,8 @@ def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame 
     per_beat = (readings if readings is not None else empty("readings")).set_index("beat")
     table["usable"] = table["beat"].map(per_beat["usable"]).eq(True)
     table["reason"] = table["beat"].map(per_beat["reason"]).astype(object).where(table["beat"].isin(per_beat.index), "not measured")
-    table["rhythm"] = ""
+    named = None if rhythms is None else rhythms.set_index("beat")["rhythm"]
+    table["rhythm"] = "" if named is None else table["beat"].map(named).astype(object).where(table["beat"].isin(named.index), "")
     rows = pd.Series(np.arange(len(table)), index=table["beat"])
     for wave in WAVES:
         mine = marks[marks["mark"] == wave]
@@ -136,6 +161,12 @@ def beat_table(beats: pd.DataFrame, marks: pd.DataFrame, readings: pd.DataFrame 
     for column in per_beat.columns:
         if column not in ("usable", "reason", "r_time_s"):
             table[column] = table["beat"].map(per_beat[column])
+    if coupling is not None:
+        of_beat = coupling.set_index("beat")
+        table["p_state"] = table["beat"].map(of_beat["p"]).astype(object).where(table["beat"].isin(of_beat.index), "unknown")
+        table["pr_s"] = table["beat"].map(of_beat["pr_s"])
+        table["p_a_s"] = table["a_time_s"] - table["r_time_s"] + table["pr_s"]
+        table["r_c_s"] = table["c_time_s"] - table["r_time_s"]
     for column in ("x_pre_mmhg", "mean_mmhg"):
         if column not in table:
             table[column] = np.nan

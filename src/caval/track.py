@@ -124,8 +124,16 @@ class Track:
         )
 
     @classmethod
-    def from_tables(cls, marks: pd.DataFrame, spans: pd.DataFrame, *, channels: Mapping[str, int], roles: Mapping[str, str]) -> Track:
-        """The track of our own marks and spans.
+    def from_tables(
+        cls,
+        marks: pd.DataFrame,
+        spans: pd.DataFrame,
+        *,
+        channels: Mapping[str, int],
+        roles: Mapping[str, str],
+        rhythms: pd.DataFrame | None = None,
+    ) -> Track:
+        """The track of our own marks, spans and rhythms.
 
         Parameters
         ----------
@@ -135,17 +143,23 @@ class Track:
             Index of each channel label in the record.
         roles
             Label of the channel that has each role, ``{"cvp": "CVP"}``.
+        rhythms
+            Stretches of one rhythm, ``onset_s, duration_s, rhythm``.
         """
         role_of = {label: role for role, label in roles.items()}
         text = [vocabulary.mark_text(m) for m in marks["mark"]]
         text += [vocabulary.span_text(k, role_of.get(c, c)) for k, c in zip(spans["kind"], spans["channel"], strict=True)]
         cvp = channels.get(roles.get("cvp", ""), -1)
-        return cls.build(
+        ours = cls.build(
             np.concatenate([marks["time_s"].to_numpy(float), spans["onset_s"].to_numpy(float)]),
             text,
             duration_s=np.concatenate([np.zeros(len(marks)), spans["duration_s"].to_numpy(float)]),
             channel=np.concatenate([np.full(len(marks), cvp), [channels.get(c, -1) for c in spans["channel"]]]).astype(np.int32),
         )
+        if rhythms is None or not len(rhythms):
+            return ours
+        words = [vocabulary.rhythm_text(word) for word in rhythms["rhythm"]]
+        return ours.join(cls.build(rhythms["onset_s"], words, duration_s=rhythms["duration_s"]))
 
     def marks(self) -> pd.DataFrame:
         """Our marks in this track: columns ``time_s`` and ``mark``, other people's annotations left out."""

@@ -8,7 +8,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 __all__ = [
-    "NOTE_CODE", "RHYTHM_CODE", "SPANS", "STATES", "WAVES", "SpanTerm", "WaveTerm", "mark_text", "parse_text", "span_text",
+    "NOTE_CODE", "RHYTHMS", "RHYTHM_CODE", "SPANS", "STATES", "WAVES", "RhythmTerm", "SpanTerm", "WaveTerm", "mark_text", "parse_text",
+    "rhythm_text", "span_text",
 ]
 
 NOTE_CODE = 22
@@ -36,6 +37,15 @@ class SpanTerm:
 
     key: str
     unusable: bool
+    meaning: str
+
+
+@dataclass(frozen=True)
+class RhythmTerm:
+    """A rhythm and its WFDB rhythm string; ``""`` where there is none, and for what does not begin a stretch."""
+
+    key: str
+    wfdb: str
     meaning: str
 
 
@@ -74,6 +84,23 @@ SPANS: dict[str, SpanTerm] = {
 """Kinds of span: the first six are what the quality stage tells apart today, the others what recordings with known truth hold."""
 
 
+RHYTHMS: dict[str, RhythmTerm] = {
+    rhythm.key: rhythm
+    for rhythm in (
+        RhythmTerm("unknown", "", "neither intervals nor P nor a waves say"),
+        RhythmTerm("sinus", "(N", "a P before each R"),
+        RhythmTerm("tachycardia", "(SVTA", "regular and fast, with a P before each R or none that T leaves to be seen"),
+        RhythmTerm("fibrillation", "(AFIB", "irregular, without P and without a"),
+        RhythmTerm("dissociation", "(B3", "P waves at a pace of their own"),
+        RhythmTerm("junctional", "(NOD", "regular, without P before R"),
+        RhythmTerm("paced", "(P", "pacing spikes before R, without conducted P"),
+        RhythmTerm("ectopic", "", "a single early beat within a rhythm"),
+    )
+}
+"""Rhythms of a beat. ``(N``, ``(AFIB``, ``(NOD``, ``(P`` and ``(SVTA`` are rhythm strings of the MIT-BIH Arrhythmia Database; ``(B3`` is
+that of the European ST-T Database for complete block (from memory)."""
+
+
 def mark_text(wave: str) -> str:
     """Annotation text of a mark: ``mark_text("a") == "CVP/a"``."""
     return f"CVP/{WAVES[wave].key}"
@@ -85,11 +112,18 @@ def span_text(kind: str, role: str = "cvp") -> str:
     return f"{'BAD_' if term is None or term.unusable else ''}{role.upper()}/{kind}"
 
 
+def rhythm_text(rhythm: str) -> str:
+    """Annotation text of a stretch of one rhythm: ``RHYTHM/sinus``."""
+    return f"RHYTHM/{RHYTHMS[rhythm].key}"
+
+
 def parse_text(text: str) -> tuple[str, str, str] | None:
-    """What one of our texts says: ``("mark", "cvp", "a")``, ``("span", "cvp", "flat")``, or None for someone else's text."""
+    """What one of our texts says: ``("mark", "cvp", "a")``, ``("span", "cvp", "flat")``, ``("rhythm", "", "sinus")``; None for others'."""
     role, slash, key = text.removeprefix("BAD_").partition("/")
     if not slash or role != role.upper():
         return None
+    if role == "RHYTHM" and key in RHYTHMS and text == rhythm_text(key):
+        return "rhythm", "", key
     if role == "CVP" and key in WAVES and not text.startswith("BAD_"):
         return "mark", "cvp", key
     return ("span", role.lower(), key) if key in SPANS else None

@@ -24,6 +24,8 @@ _LOG_PRIOR = -0.5 * ((_DELAYS_S - 0.04) / 0.03) ** 2
 """Delays of line and monitor that are tried: 0.01 to 0.04 s is usual (from memory), long or soft lines go beyond."""
 _LEFT_OUT = {"a": -3.5, "c": -1.2, "x": -4.0, "v": -6.0, "y": -3.0}
 """Score of a chain that lacks the wave."""
+_PASSED_OVER = {"c": 3.0}
+"""Further cost of leaving a wave out though an extremum as tall as the picture stands at its place."""
 _LENIENT_A, _FAST_S = -1.5, 0.45
 """The same for a where no P is proven, and in a heart this fast, where a runs into c."""
 _LATEST_A_S = 0.08
@@ -76,8 +78,8 @@ def label(beat: MedianBeat) -> dict[str, float]:
     """Time from R of each wave the beat shows, seconds; no entry for a wave it does not show.
 
     Where the heart puts them (seconds after R, before the delay; I is the interval, at most 1.6 s): a 0.095 after the onset of P (0.08 to
-    0.10, from memory), or 0.10 before R where no P is known; c 0.09; x 0.19 + 0.03 I; v 0.20 + 0.24 I; y 0.16 after v. The lines in I
-    follow the model's own circulation at 40 to 180/min; the spreads around them are wide enough for hearts that are not the model's.
+    0.10, from memory), or 0.10 before R where no P is known; c 0.09; x 0.19 + 0.03 I; v 0.20 + 0.24 I; y 0.04 + 0.11 I after v. The lines
+    in I lie between the model's own circulation at 40 to 180/min and real hearts; the spreads around them are wide enough for both.
     """
     interval = min(beat.interval_s, 1.6)
     peaks, troughs = beat.extrema(1.0), beat.extrema(-1.0)
@@ -99,30 +101,37 @@ def _terms(wave: str, index: NDArray[np.int64], usual: float, spread: float, bea
     """Extrema that may be the wave: (time from R, score at each delay); NaN stands for leaving it out."""
     sign = -1.0 if wave in "xy" else 1.0
     found: Terms = []
-    for k in index:
+    passed_over = np.zeros(len(_DELAYS_S))
+    prominence = signal.peak_prominences(sign * beat.trace_mmhg, index)[0] / beat.span_mmhg
+    for k, stands in zip(index, prominence, strict=True):
         off = (beat.time_s[k] - usual - _DELAYS_S) / spread
         if np.abs(off).min() < _FARTHEST:
+            passed_over = np.maximum(passed_over, stands * np.exp(-0.5 * off**2))
             found.append((float(beat.time_s[k]), _WEIGHT[wave] * sign * beat.trace_mmhg[k] / beat.span_mmhg - 0.5 * off**2))
     lenient = wave == "a" and (beat.atrial != "coupled" or beat.interval_s < _FAST_S)
     lacking = _LENIENT_A if lenient else _LEFT_OUT[wave]
-    return [*found, (np.nan, np.full(len(_DELAYS_S), lacking))]
+    return [*found, (np.nan, lacking - _PASSED_OVER.get(wave, 0.0) * passed_over)]
 
 
 def _terms_y(v: float, troughs: NDArray[np.int64], beat: MedianBeat) -> list[tuple[float, float]]:
     """Troughs that may be the y after this v, with their scores."""
     after = beat.time_s[troughs] - v
     near = troughs[(after > 0.04) & (after < 0.36)]
-    scores = -_WEIGHT["y"] * beat.trace_mmhg[near] / beat.span_mmhg - 0.5 * ((beat.time_s[near] - v - 0.16) / 0.09) ** 2
+    interval = min(beat.interval_s, 1.6)
+    off = (beat.time_s[near] - v - 0.04 - 0.11 * interval) / (0.03 + 0.05 * interval)
+    scores = -_WEIGHT["y"] * beat.trace_mmhg[near] / beat.span_mmhg - 0.5 * off**2
     return [*zip(beat.time_s[near].tolist(), scores.tolist(), strict=True), (np.nan, _LEFT_OUT["y"])]
 
 
 def _usual_a(beat: MedianBeat) -> tuple[float, float]:
-    return (0.095 - beat.pr_s, 0.025) if np.isfinite(beat.pr_s) else (-0.10, 0.07)
+    if not np.isfinite(beat.pr_s):
+        return -0.10, 0.07
+    return 0.095 - beat.pr_s, 0.04 if beat.interval_s < _FAST_S else 0.025  # in a fast heart QRS and T leave little of P to be seen
 
 
 def _atrial_peaks(peaks: NDArray[np.int64], beat: MedianBeat) -> NDArray[np.int64]:
     """Peaks that may be an a at a fixed place before R: none where the ECG shows no P or one that goes its own way."""
-    if beat.atrial in ("apart", "absent"):
+    if beat.atrial == "apart" or (beat.atrial == "absent" and not beat.regular):
         return peaks[:0]
     if beat.atrial == "coupled":
         return peaks
@@ -142,9 +151,10 @@ def _best_chain(terms: Mapping[str, Terms], ys: Mapping[float, list[tuple[float,
                 if x < a + 0.06 or x < c + 0.03:
                     continue
                 for (v, v_score), tails in zip(terms["v"], ys.values(), strict=True):
-                    if v < x + 0.08 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04:
+                    if v < x + 0.05 or v < a + 0.10 or v < c + 0.08 or v > a + interval_s - 0.04 or v > c + interval_s - 0.08:
                         continue
-                    y, y_score = max((t for t in tails if not t[0] > a + interval_s - 0.03), key=lambda t: t[1])
+                    latest = np.fmin(a, c) + interval_s - 0.03
+                    y, y_score = max((tail for tail in tails if not tail[0] > latest), key=lambda tail: tail[1])
                     score = float((start + x_score + v_score).max()) + y_score
                     if score > best:
                         best, chosen = score, (a, c, x, v, y)
@@ -153,7 +163,7 @@ def _best_chain(terms: Mapping[str, Terms], ys: Mapping[float, list[tuple[float,
 
 def _cannon(places: dict[str, float], beat: MedianBeat) -> None:
     """Rename to a what stands at c's place as an atrial wave on a shut valve would (see `_CANNON`)."""
-    if beat.atrial != "absent" or not beat.regular or not {"c", "x", "v"} <= set(places):
+    if beat.atrial != "absent" or not beat.regular or "a" in places or not {"c", "x", "v"} <= set(places):
         return
     c, x, v = (float(np.interp(places[w], beat.time_s, beat.trace_mmhg)) for w in "cxv")
     if c - x > _CANNON * (v - x):
