@@ -87,8 +87,8 @@ def given_beats(times_s: Sequence[float] | np.ndarray) -> pd.DataFrame:
     times = np.asarray(times_s, dtype=np.float64)
     if times.ndim != 1 or not np.isfinite(times).all():
         raise InputError("beat times must be one list of finite seconds")
-    beats = pd.DataFrame({"beat": 0, "r_time_s": np.sort(times), "r_sd_s": np.nan, "rr_s": np.nan, "source": "given", "confidence": 1.0})
-    return tables.number_beats(beats)
+    blank = {"r_sd_s": np.nan, "rr_s": np.nan, "source": "given", "confidence": 1.0, "kind": "normal"}
+    return tables.number_beats(pd.DataFrame({"beat": 0, "r_time_s": np.sort(times), **blank}))
 
 
 def mark(

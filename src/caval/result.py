@@ -181,8 +181,8 @@ def _statements(
     """What a reader must know that the tables do not shout."""
     said = list(recording.notes)
     if "ecg" not in roles:
-        rest = "beats rest on the arterial trace alone" if "abp" in roles else "nor an arterial one: nothing to find beats on"
-        said.append(f"no ECG channel; {rest}" if "abp" in roles else f"no ECG channel, {rest}")
+        rest = "the arterial trace alone" if "abp" in roles else "the venous waves alone, which tell R to 0.06 s at best"
+        said.append(f"no ECG channel; beats rest on {rest}")
     if not len(beats):
         said.append("no beats found, so no marks")
     elif not len(marks):

@@ -161,6 +161,8 @@ def beat_table(
     for column in per_beat.columns:
         if column not in ("usable", "reason", "r_time_s"):
             table[column] = table["beat"].map(per_beat[column])
+    if "kind" in beats:
+        table["kind"] = beats["kind"]
     if coupling is not None:
         of_beat = coupling.set_index("beat")
         table["p_state"] = table["beat"].map(of_beat["p"]).astype(object).where(table["beat"].isin(of_beat.index), "unknown")

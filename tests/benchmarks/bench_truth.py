@@ -13,6 +13,7 @@ a true one, 25 ms for the confidence (own choices: no published tolerance exists
 from __future__ import annotations
 
 import argparse
+import importlib
 import warnings
 from collections.abc import Iterator
 from concurrent.futures import ProcessPoolExecutor
@@ -233,11 +234,9 @@ def calibrate(some: list[Case]) -> None:
 
     def catch(wave: str, evidence: np.ndarray) -> np.ndarray:
         caught.append((wave, evidence))
-        return np.where(np.isfinite(evidence).all(axis=1), np.arange(len(evidence)) / 1e6, -1.0)  # a number to know the row by
+        return np.where(~np.isnan(evidence).any(axis=1), np.arange(len(evidence)) / 1e6, -1.0)  # a number to know the row by
 
-    from caval.stages import waves as stage_of_waves
-
-    module = __import__("sys").modules[stage_of_waves.__module__] if not hasattr(stage_of_waves, "confidence") else stage_of_waves
+    module = importlib.import_module("caval.stages.waves")
     module.confidence = catch  # type: ignore[attr-defined]
     for case in some:
         caught.clear()
@@ -259,8 +258,27 @@ def calibrate(some: list[Case]) -> None:
         def loss(w: np.ndarray, x: np.ndarray = x, sign: np.ndarray = sign) -> float:
             return float(np.mean(np.logaddexp(0, -sign * (x @ w))) + 1e-3 * np.sum(w[1:] ** 2))
 
-        weights = minimize(loss, np.zeros(x.shape[1])).x
-        print(f'    "{wave}": ({", ".join(f"{w:.2f}" for w in weights)}),  # {len(y)} marks, {y.mean():.3f} right', flush=True)
+        weights = np.round(minimize(loss, np.zeros(x.shape[1])).x, 2)
+        knots = _steps(1.0 / (1.0 + np.exp(-(x @ weights))), y)
+        said = [", ".join(f"{value:g}" for value in row) for row in (weights, *knots.T)]
+        print(f'    "{wave}": (({said[0]}), ({said[1]}), ({said[2]})),  # {len(y)} marks, {y.mean():.3f} right', flush=True)
+
+
+def _steps(said: np.ndarray, right: np.ndarray, least: int = 60) -> np.ndarray:
+    """What is right of the marks that say so much, in bins of at least `least` marks, never falling: rows of (said, right)."""
+    order = np.argsort(said)
+    edges = np.searchsorted(said[order], [0.4, 0.6, 0.7, 0.8, 0.86, 0.9, 0.93, 0.96, 0.98, 0.99])
+    bins = [part for part in np.split(order, edges) if len(part)]
+    pools: list[list[np.ndarray]] = []
+    for part in bins:
+        pools.append([part])
+        while len(pools) > 1 and (
+            right[np.concatenate(pools[-2])].mean() >= right[np.concatenate(pools[-1])].mean() or sum(map(len, pools[-2])) < least
+        ):
+            last = pools.pop()
+            pools[-1] += last
+    rows = [np.concatenate(pool) for pool in pools]
+    return np.array([(round(float(said[k].mean()), 3), round(float(right[k].mean()), 3)) for k in rows])
 
 
 def main() -> None:

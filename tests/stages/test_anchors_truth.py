@@ -18,6 +18,7 @@ from caval.model.ecg import ecg
 from caval.model.events import Diathermy, spoil_ecg
 from caval.model.scenario import load_scenario
 from caval.model.simulate import Simulation, simulate
+from caval.model.sketch import sketch
 from caval.recording import Recording
 from caval.stages._sequence import kinds
 
@@ -260,3 +261,26 @@ def test_kinds_of_a_sequence():
     every_second[1::2] -= 0.25
     assert list(np.flatnonzero(kinds(every_second, none) == "premature")) == list(range(1, 40, 2))
     assert list(kinds(steady[:3], none[:3])) == ["normal"] * 3
+
+
+@pytest.mark.parametrize("channels", [("ECG", "ABP"), ("ECG",), ()], ids=["both", "ECG", "neither"])
+def test_rows_are_the_same_whatever_the_block(channels):
+    """With a lead off across a block's border, so that transit times and venous pictures learned elsewhere are needed there."""
+    drawn = sketch(minutes=8, seed=6).recording
+    arrays = {c.label: (c.physical(), c.sampling_rate, c.unit) for c in drawn.channels if c.label.split()[0] in ("CVP", *channels)}
+    for label, (values, rate, unit) in arrays.items():
+        if label.startswith("ECG"):
+            off = values.copy()
+            off[round(225 * rate) : round(262 * rate)] = 0.0
+            off[round(100 * rate) : round(140 * rate)] = 0.0
+            arrays[label] = (off, rate, unit)
+    recording = Recording.from_arrays(arrays)
+    whole = caval.Pipeline(stages=("anchors",)).run(recording)["beats"]
+    assert len(whole) > 300
+    for block_s in (60.0, 240.0):
+        other = caval.Pipeline(stages=("anchors",), block_s=block_s).run(recording)["beats"]
+        assert len(other) == len(whole)
+        for column in ("r_time_s", "r_sd_s", "confidence"):
+            assert np.allclose(other[column], whole[column], rtol=0, atol=1e-9), column
+        for column in ("source", "kind"):
+            assert list(other[column]) == list(whole[column])

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from math import exp
+from math import exp, sqrt
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,7 +17,8 @@ _REGULAR = 0.8
 """What an interval of the usual length adds."""
 _REGULAR_SD = 0.10
 _SHORT, _TOO_SHORT = 0.6, 3.0
-"""Below this share of the usual interval, an interval takes away so much a unit of share."""
+"""Below this share of the usual interval, or in a slow heart of its square root (repolarisation goes with that: Bazett), an interval takes
+away so much a unit of share."""
 _LONG, _LONGEST, _GAP = 1.5, 1.95, 1.5
 """An interval of more than `_LONG` usual ones takes away up to `_GAP`: hearts seldom pause without a beat that came early.
 The pause after such a beat, up to one and a half, is no pause of that kind."""
@@ -50,12 +51,13 @@ def best_sequence(time: Floats, weight: Floats, usual: Floats, steadiness: Float
     running: list[tuple[float, int]] = [(0.0, -1)]  # running[k]: the best total among candidates before k, and which
     for i, (here, own, period, gap) in enumerate(zip(t, w, u, gaps, strict=True)):
         before, link = running[first[i]]
+        slow = min(period, sqrt(period))
         best, link = (before - gap, link) if before > gap else (0.0, -1)
         for k in range(first[i], last[i]):
             share = (here - t[k]) / period
             gain = total[k] + _REGULAR * exp(-0.5 * ((share - 1.0) / _REGULAR_SD) ** 2)
             if share < _SHORT:
-                gain -= _TOO_SHORT * (_SHORT - share)
+                gain -= _TOO_SHORT * max(0.0, _SHORT - (here - t[k]) / slow)
             elif share > _LONG:
                 gain -= gap * min(1.0, (share - _LONG) / (_LONGEST - _LONG))
             if gain > best:

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from scipy import ndimage, signal
 
 from caval.recording import Signal
-from caval.stages._evidence import GRID_S
+from caval.stages._evidence import GRID_S, LEARN_S
 from caval.stages._signal import bandpass, cut, fill, refine
 
 __all__ = ["VenousBeats", "venous_beats"]
@@ -43,7 +43,7 @@ class VenousBeats:
 
 
 def venous_beats(cvp: Signal, known_s: Floats) -> VenousBeats:
-    """Beats that the venous trace shows, minute by minute, from a picture of three minutes.
+    """Beats that the venous trace shows, minute by minute, from a picture of it and half a minute on either side.
 
     `known_s` are R times of sure beats; a minute that has at least eight of them around takes its picture from them.
     """
@@ -52,9 +52,10 @@ def venous_beats(cvp: Signal, known_s: Floats) -> VenousBeats:
     length = round((_BEFORE_S + _AFTER_S) * rate) | 1
     found: list[tuple[Floats, Floats, Floats]] = []
     for k in range(int(np.floor(thin.start_s / GRID_S + 1e-9)), int(np.ceil(thin.stop_s / GRID_S - 1e-9))):
-        low, high = np.clip(np.rint(thin.position([(k - 1) * GRID_S, (k + 2) * GRID_S])), 0, len(thin)).astype(int)
+        from_s, to_s = k * GRID_S - LEARN_S, (k + 1) * GRID_S + LEARN_S
+        low, high = np.clip(np.rint(thin.position([from_s, to_s])), 0, len(thin)).astype(int)
         part = thin.values[low:high]
-        known = (known_s[(known_s >= (k - 1) * GRID_S) & (known_s < (k + 2) * GRID_S)] - thin.start_s) * rate - low
+        known = (known_s[(known_s >= from_s) & (known_s < to_s)] - thin.start_s) * rate - low
         if len(part) < 4 * length or not part.any():
             continue
         period = _period(part, rate)

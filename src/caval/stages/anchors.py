@@ -5,8 +5,8 @@ it) and what the artery says (an upstroke a transit time later, or none) add up 
 candidates with the largest sum, found by dynamic programming over the intervals between them. So a burst of diathermy costs no beat while
 the artery shows it, and an extrasystole without a pulse stays while the ECG is quiet.
 
-What is learned (the QRS picture, its size, the transit time) is learned on a fixed grid of minutes, each from itself and its two
-neighbours.
+What is learned (the QRS picture, its size, the transit time) is learned on a fixed grid of minutes, each from itself and half a minute on
+either side.
 """
 
 from __future__ import annotations
@@ -21,9 +21,10 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, Transit, ecg_evidence, learn_transit, no_evidence
+from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, ecg_evidence, no_evidence
 from caval.stages._sequence import best_sequence, kinds
 from caval.stages._signal import cut, fill, lowpass
+from caval.stages._transit import Transit, learn_transit
 from caval.stages._venous import venous_beats
 
 __all__ = ["anchors"]
@@ -49,7 +50,7 @@ _UNSTEADY = 0.16
 _T_OVER = 0.42
 """T is over this long after R, times the square root of the interval (Bazett, Heart 1920;7:353, from memory): what is tall then is no T."""
 _WIDE = 0.6
-"""A wide complex has so much less energy in the QRS band than a narrow one as tall (computed for one twice as wide)."""
+"""Energy in the QRS band of a complex as tall as the usual one and twice as wide, over that of the usual one (computed: 0.56)."""
 _OFF_S = 0.04
 _NOT_FILLED_S = 0.02
 """A weak pulse's transit is this uncertain besides: the ventricle takes longer to open the valve."""

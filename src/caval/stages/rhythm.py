@@ -99,7 +99,10 @@ def rhythm(
     told = _majority(told, len(names))
 
     with_p = np.isin(told, [names.index("sinus"), names.index("tachycardia")])
-    told[with_p & (interval < early * usual)] = names.index("ectopic")
+    is_early = interval < early * usual
+    if "kind" in beats:
+        is_early |= beats["kind"].astype(str).str.startswith("premature").to_numpy()
+    told[with_p & is_early] = names.index("ectopic")
     words = np.array(names, dtype=object)[told]
     return pd.DataFrame({"beat": beats["beat"].to_numpy(np.int64), "r_time_s": r, "rhythm": words})
 

@@ -219,7 +219,7 @@ class _Extrema:
 class _Hits:
     """Marks of one kind as columns; `time` (s) is NaN where nothing was found, `rise` is the prominence (mmHg).
 
-    `evidence` is what the confidence is made of, shape (n, 4), see `caval.stages._confidence.design`.
+    `evidence` is what the confidence is made of, shape (n, 5), see `caval.stages._confidence.design`.
     """
 
     beat: NDArray[np.int64]
@@ -232,7 +232,7 @@ class _Hits:
     def none(cls, beat: NDArray[np.int64]) -> _Hits:
         """No mark for each of some beats."""
         nothing = np.full(len(beat), np.nan)
-        return cls(beat, nothing, nothing.copy(), np.full((len(beat), 4), np.nan), np.full(len(beat), "clear", dtype=object))
+        return cls(beat, nothing, nothing.copy(), np.full((len(beat), 5), np.nan), np.full(len(beat), "clear", dtype=object))
 
     def only(self, rows: NDArray) -> _Hits:
         return _Hits(*(getattr(self, column.name)[rows] for column in fields(self)))
@@ -414,7 +414,7 @@ class _Found:
         weak = rise < np.maximum(_WEAK_MMHG, 2.0 * noise)
         second = np.where(np.arange(score.shape[1]) == best[:, None], -np.inf, score).max(axis=1)
         lead = np.where(hit, score[rows, best], 0.0) - np.where(np.isfinite(second), second, -np.inf)
-        evidence = np.column_stack([rise / (noise + 0.02), off[rows, best], lead, self.interval[which]])
+        evidence = np.column_stack([rise / (noise + 0.02), off[rows, best], lead, self.interval[which], rise / span])
         return _Hits(beat, np.where(hit, time[rows, best], np.nan), rise, evidence, np.where(weak, "weak", "clear").astype(object))
 
     def one_of_two(self) -> None:
