@@ -13,7 +13,7 @@ from dataclasses import dataclass, fields
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
-from scipy import signal
+from scipy import ndimage, signal
 
 from caval import tables
 from caval.recording import Signal
@@ -49,6 +49,10 @@ _P_TO_A_S, _LATEST_S = 0.090, 0.08
 """From P to a at the heart (0.08 to 0.10 s, from memory), and the longest delay that z is read with."""
 _EARLY = 0.8
 """Share of the usual interval below which a beat is early: its P, if it has one, is not where it usually is."""
+_FEW_BEATS = 4
+"""Beats either way that tell whether P and evenness are lost."""
+_UNEVEN = 0.09
+"""Median difference of successive intervals over the usual interval, from which they are uneven; see the rhythm stage."""
 _LATEST_CANNON_S = 0.25
 _INTO_NEXT_S = 0.12
 """How far past the next R v and y may stand: in a fast heart, through a line, they do."""
@@ -128,7 +132,7 @@ def waves(
     for wave in "vy":
         found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
     bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + _LATEST_CANNON_S, found.time("x") - 0.05)
-    found.seek("a", sharp[1.0], *bounds, rows=found.without_a(of_p))
+    found.seek("a", sharp[1.0], *bounds, rows=found.without_a(of_p, coupling))
     found.join("a", of_p)
     broad[1.0].take_near(found.time("a"))
     found.seek("c", sharp[1.0], np.fmax(r + 0.02, found.time("a") + 0.04), np.fmin(found.time("x"), found.time("v") - 0.05) - 0.02)
@@ -358,13 +362,21 @@ class _Found:
         v[hidden] = self.hits["v"].time[hidden] = np.nan
         return np.where(hidden, before, np.nan)
 
-    def without_a(self, of_p: _Hits) -> NDArray[np.bool_]:
+    def without_a(self, of_p: _Hits, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
         """Beats whose a is sought at a fixed place from R, where the picture has one: those that come in time and have none after a P.
 
-        A lead may hide the P of a beat; the pressure decides whether there is an a.
+        A lead may hide the P of a beat; the pressure decides whether there is an a. But where beats have lost their P and their evenness, as
+        when fibrillation begins, the picture is still that of the rhythm before and says nothing of them.
         """
         in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * self.interval[self.which])
-        return in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
+        lacking = in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
+        if coupling is None or not len(coupling):
+            return lacking
+        state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).to_numpy(object)
+        interval = np.diff(self.r, prepend=self.r[0])
+        uneven = ndimage.median_filter(np.abs(np.diff(interval, prepend=interval[0])), 2 * _FEW_BEATS + 1, mode="nearest")
+        gone = ndimage.uniform_filter1d((state == "absent").astype(float), 2 * _FEW_BEATS + 1, mode="nearest") > 0.5
+        return lacking & ~(gone & (uneven > _UNEVEN * self.interval[self.which]))
 
     def join(self, wave: str, more: _Hits) -> None:
         """Add marks to those of a wave; the last before R stands for the beat."""
