@@ -365,8 +365,8 @@ class _Found:
     def without_a(self, of_p: _Hits, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
         """Beats whose a is sought at a fixed place from R, where the picture has one: those that come in time and have none after a P.
 
-        A lead may hide the P of a beat; the pressure decides whether there is an a. But where beats have lost their P and their evenness, as
-        when fibrillation begins, the picture is still that of the rhythm before and says nothing of them.
+        A lead may hide the P of a beat; the pressure decides whether there is an a. But where beats have lost their P and their evenness,
+        as when fibrillation begins, the picture is still that of the rhythm before and says nothing of them.
         """
         in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * self.interval[self.which])
         lacking = in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
