@@ -40,14 +40,27 @@ _QT_S = 0.40
 _QRS_SLOPE = 0.2
 _LEAST_P = 0.008
 """Height of a P over that of the QRS complex, at the least (0.1 to 0.2 is usual; common practice)."""
-_ONSET_S = 0.023
-"""From the onset of a P of 0.11 s to half its height (for a bump like a normal density of which 2.3 % lie before the onset)."""
+_ONSET_S, _ONSET_SHARE = 0.023, 0.7
+"""From the onset of a P of 0.11 s to half its height (for a bump like a normal density of which 2.3 % lie before the onset), at the most;
+of a shorter rise, of a narrow P or of one that the QRS complex cuts off, this share of its upper half (the same density)."""
 _PROVEN = 6.0
 """Bump of the median over its standard error from which a P is proven: one in 10⁸ by chance at one place, one in 10⁶ over the window."""
 _ALIKE = 0.55
 """Correlation with the median's P from which a beat has its own P."""
 _TOO_LOUD = 0.7
-"""What of a beat's window is not P, over P, above which a lacking likeness says nothing."""
+"""What of a beat's window is not P, over P, above which a lacking likeness says nothing. Where most beats are as loud, P may march."""
+_QUIET = 1.5
+"""Roughness, over that of the quietest quarter, up to which a beat takes part in the picture."""
+_LOCAL, _LOCAL_SHARE = 15, 0.5
+"""Beats that must hold, by their median, this share of the picture's P: a rhythm may begin within the two minutes of a picture."""
+_UNEVEN = 0.09
+"""Median change of successive intervals over the median interval from which they are uneven, as in the rhythm stage."""
+_USUAL_P = 0.1
+"""Height over that of the QRS complex of a small usual P (common practice). Where none could have been proven, its lack says nothing."""
+_SPIKE, _SPIKE_S = 0.15, 0.004
+"""A pacing spike is bent by this share of the height of the trace within this time."""
+_LOUD_BEAT = 4.0
+"""Roughness of a beat over that of the quieter ones from which its lacking P says nothing."""
 _REACH_S = 0.05
 _FASTEST_S, _SLOWEST_S = 0.33, 1.7
 """Intervals between P waves that are tried when they march."""
@@ -83,23 +96,34 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
     """
     lead = None if ecg is None else _thin(ecg)
     r = beats["r_time_s"].to_numpy(float)
+    normal = (beats["kind"] == "normal").to_numpy() if "kind" in beats else np.ones(len(r), dtype=bool)
     if len(r) < FEWEST or lead is None:
         return tables.empty("atria"), _coupling(beats, np.full(len(r), "unknown", dtype=object), np.full(len(r), np.nan), np.zeros(len(r)))
     state = np.full(len(r), "unknown", dtype=object)
     onset, sure = np.full(len(r), np.nan), np.zeros(len(r))
     marching: list[tuple[float, float]] = []
+    uneven = _uneven(r)
     for k in range(int(np.floor(r[0] / KNOT_S)), int(np.ceil(r[-1] / KNOT_S)) + 1):
         here = np.flatnonzero((r >= (k - 0.5) * KNOT_S) & (r < (k + 0.5) * KNOT_S))
         near = np.flatnonzero(np.abs(r - k * KNOT_S) <= NEIGHBOURS_S)
         if not len(here) or len(near) < FEWEST:
             continue
-        view = _View.of(lead, r[near])
+        alike = _alike(normal, near)
+        view = _View.of(lead, r[alike], _interval(r, alike))
         if view is None:
             continue  # T runs into the next QRS complex: a P could not be seen
-        said = _coupled(view, r[near], r[here])
-        if said is None:
-            said = _marching(lead, r, near, here, marching, ((k - 0.5) * KNOT_S, (k + 0.5) * KNOT_S))
-        state[here], onset[here], sure[here] = said
+        cell = ((k - 0.5) * KNOT_S, (k + 0.5) * KNOT_S)
+        rows = view.rows(r[alike])
+        quiet = _quiet(rows)
+        picture = _Picture.of(view, quiet)
+        march = _marching(lead, r, near, cell) if picture is None or picture.doubtful else None
+        if march is not None:
+            marching += march
+            state[here], sure[here] = "apart", 0.9
+        elif picture is not None:
+            state[here], onset[here], sure[here] = _each(view, picture, r[here], uneven[here], r[alike], rows)
+        else:
+            state[here], sure[here] = _without(view, quiet, r[here]), 0.8
     onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
     atria = _atria(beats, r, onset, sure, np.round(np.array(marching).reshape(-1, 2), 6))
     return atria, _coupling(beats, state, r - onset, sure)
@@ -132,10 +156,26 @@ def _thin(ecg: Signal) -> _Lead | None:
     if missing.mean() > 0.9 or len(values) < 4 * ecg.sampling_rate or np.ptp(values) == 0:
         return None
     thin = Thin.of(ecg, _EVERY_S)
-    coarse = thin.take(moving_mean(values, thin.step))
+    coarse = thin.take(moving_mean(_without_spikes(values, ecg.sampling_rate), thin.step))
     rate = ecg.sampling_rate / thin.step
     wander = moving_mean(moving_mean(coarse, round(0.9 * rate)), round(0.9 * rate))
     return _Lead(lowpass(coarse - wander, rate, _LOWPASS_HZ), rate, ecg.start_s + thin.offset / ecg.sampling_rate)
+
+
+def _without_spikes(values: Floats, rate: float) -> Floats:
+    """The ECG without pacing spikes, which thinning would widen into bumps: a deflection that is over within four milliseconds, on either
+    side of which the trace goes on as before, gives way to the median around it."""
+    reach = max(1, round(_SPIKE_S * rate))
+    if rate < 240 or len(values) < 4 * reach:
+        return values
+    bend = np.abs(2 * values[reach:-reach] - values[: -2 * reach] - values[2 * reach :])
+    low, high = np.percentile(values[:: max(1, round(rate / 100))], [0.5, 99.5])
+    sharp = np.flatnonzero(bend > 2 * _SPIKE * (high - low)) + reach
+    if not len(sharp):
+        return values
+    out = values.copy()
+    out[sharp] = np.median(cut(values, sharp - 2 * reach, 4 * reach + 1), axis=1)
+    return out
 
 
 def _hat(rate: float) -> Floats:
@@ -147,19 +187,101 @@ def _hat(rate: float) -> Floats:
     return np.asarray(bump / np.linalg.norm(bump))
 
 
-def _coupled(view: _View, near: Floats, here: Floats) -> tuple[NDArray, Floats, Floats] | None:
-    """What each beat shows when the median of the near ones shows a proven P; None when it does not."""
-    rows = view.rows(near)
+def _uneven(r: Floats) -> NDArray[np.bool_]:
+    """Beats around which the intervals change from one to the next as they do in fibrillation."""
+    interval = np.diff(r, prepend=2 * r[0] - r[1])
+    change, usual = (ndimage.median_filter(x, _LOCAL, mode="nearest") for x in (np.abs(np.diff(interval, prepend=interval[0])), interval))
+    return np.asarray(change > _UNEVEN * usual)
+
+
+def _alike(normal: NDArray[np.bool_], near: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Of the beats near, those of which the picture is made: not early ones, which have no P or one at another place, and, while enough are
+    left, none that comes after an early one, on whose T its P may lie."""
+    usual = near[normal[near]]
+    calm = usual[normal[np.maximum(usual - 1, 0)]]
+    if len(usual) < FEWEST:
+        return near
+    return calm if len(calm) >= max(FEWEST, len(usual) / 4) else usual
+
+
+def _interval(r: Floats, rows: NDArray[np.int64]) -> float:
+    """The usual interval before some of the beats, s."""
+    rows = rows[rows > 0]
+    return float(np.median(r[rows] - r[rows - 1]))
+
+
+def _quiet(rows: Floats) -> Floats:
+    """The rows inside the record that are about as quiet as the quieter half: diathermy on many beats must not hide the P of the others."""
     rows = rows[np.isfinite(rows).all(axis=1)]
-    reach = round(0.1 * view.lead.rate)
-    if len(rows) < FEWEST:
-        return None
-    top = _proven_bump(rows, view.pad, reach, most=round(0.9 * _P_WIDTH_S * view.lead.rate), least=_LEAST_P * view.qrs)
-    if top is None:
-        return None
-    median = np.median(rows, axis=0)
-    lead_s = (top - _half_rise(median, top, reach)) / view.lead.rate + _ONSET_S
-    return _each(view, here, median[top - view.pad : top + view.pad + 1], top - view.pad, lead_s)
+    if len(rows) < 2 * FEWEST:
+        return rows
+    loud = _roughness(rows)
+    return rows[loud <= _QUIET * np.sort(loud)[len(loud) // 4]]
+
+
+def _roughness(rows: Floats) -> Floats:
+    """Root mean square of the steps from sample to sample of each row."""
+    step = rows[:, 1:] - rows[:, :-1]
+    return np.asarray(np.sqrt(np.einsum("ij,ij->i", step, step) / step.shape[1]))
+
+
+@dataclass(frozen=True, eq=False)
+class _Picture:
+    """A proven P.
+
+    Attributes
+    ----------
+    values : float64 array
+        The median of the quieter beats around the P, less its mean.
+    first : int
+        Index of ``values[0]`` in the rows of the view.
+    own : int
+        Of the values, so many are P alone: those after it lie below the foot of P and are QRS complex, which beats without a P have too.
+    lead_s : float
+        From the onset of the P to its top, seconds.
+    whole : bool
+        T does not reach into its left half.
+    doubtful : bool
+        Most beats hold more beside the P than P: P waves that march across a hump before R look like that.
+    """
+
+    values: Floats
+    first: int
+    own: int
+    lead_s: float
+    whole: bool
+    doubtful: bool
+
+    @classmethod
+    def of(cls, view: _View, rows: Floats) -> _Picture | None:
+        """The P that quiet rows of the view prove; None when they prove none."""
+        rate = view.lead.rate
+        reach = round(0.1 * rate)
+        if len(rows) < FEWEST:
+            return None
+        top = _proven_bump(rows, view.pad, reach, most=round(0.9 * _P_WIDTH_S * rate), least=_LEAST_P * view.qrs)
+        if top is None:
+            return None
+        median = np.median(rows, axis=0)
+        first = top - view.pad
+        values = median[first : top + view.pad + 1]
+        rest = rows[:, first : top + view.pad + 1] - values
+        rest = rest - rest.mean(axis=1, keepdims=True)
+        values = values - values.mean()
+        doubtful = float(np.median(np.linalg.norm(rest, axis=1))) > _TOO_LOUD * float(np.linalg.norm(values))
+        rise_s = (top - _half_rise(median, top, reach)) / rate
+        whole = first >= view.pad
+        lead_s = rise_s + (min(_ONSET_S, _ONSET_SHARE * rise_s) if whole else _ONSET_S)
+        return cls(values, first, _end(median, top, view.pad) - first, lead_s, whole, doubtful)
+
+
+def _end(median: Floats, top: int, pad: int) -> int:
+    """Where the fall from a bump passes the foot from which it rose; at the latest `pad` and one after its top."""
+    left, right = median[top - pad : top + 1], median[top : top + pad + 1]
+    sign = 1.0 if 2 * median[top] > left.min() + left.max() else -1.0
+    foot = (sign * left).min()
+    below = np.flatnonzero(sign * right < foot)
+    return top + (int(below[0]) if len(below) else pad + 1)
 
 
 def _half_rise(median: Floats, top: int, reach: int) -> float:
@@ -208,8 +330,8 @@ class _View:
     qrs: float
 
     @classmethod
-    def of(cls, lead: _Lead, r: Floats) -> _View | None:
-        """The view of some beats; None where T runs into the next QRS complex.
+    def of(cls, lead: _Lead, r: Floats, interval_s: float) -> _View | None:
+        """The view of some beats, which come `interval_s` after the ones before; None where T runs into the next QRS complex.
 
         The onset of the QRS complex is where, going back from R, the slope of the median has fallen to a fifth of its steepest.
         """
@@ -222,8 +344,7 @@ class _View:
         steep = np.flatnonzero(slope[: r_at + 1] > _QRS_SLOPE * slope[r_at - round(0.1 * lead.rate) :].max())[::-1]
         jumps = np.flatnonzero(-np.diff(steep) > gap)
         onset = steep[jumps[0]] if len(jumps) else (steep[-1] if len(steep) else r_at)
-        interval = float(np.median(np.diff(r)))
-        before = round(min(_LONGEST_PR_S, interval - _QT_S * np.sqrt(interval)) * lead.rate)
+        before = round(min(_LONGEST_PR_S, interval_s - _QT_S * np.sqrt(interval_s)) * lead.rate)
         length = before - int(r_at - onset)
         pad = round(0.55 * _P_WIDTH_S * lead.rate)
         if length < round(0.5 * _P_WIDTH_S * lead.rate):
@@ -244,30 +365,73 @@ class _View:
         return self.lead.start_s + (self.lead.index(r) - self.before - self.pad + index) / self.lead.rate
 
 
-def _each(view: _View, r: Floats, picture: Floats, best: int, lead_s: float) -> tuple[NDArray, Floats, Floats]:
-    """Each beat's own P: the place near the median's where the beat looks most like it, and how much."""
-    rate, half = view.lead.rate, len(picture) // 2
-    picture = picture - picture.mean()
-    size = float(np.linalg.norm(picture))
+def _each(
+    view: _View, picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+) -> tuple[NDArray, Floats, Floats]:
+    """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are the R that the picture
+    was sought among and `shown` their rows: they show whether P is still there."""
+    rate, p, best = view.lead.rate, picture.values, picture.first
+    size = float(np.linalg.norm(p))
     rows = view.rows(r)
     outside = np.asarray(~np.isfinite(rows).all(axis=1))
     rows = np.where(outside[:, None], 0.0, rows)
     reach = round(_REACH_S * rate)
-    lags = np.arange(max(-reach, -best), min(reach, rows.shape[1] - best - len(picture)) + 1)
-    windows = np.stack([rows[:, best + lag : best + lag + len(picture)] for lag in lags], axis=1)  # beats × lags × samples
+    lags = np.arange(max(-reach, -best), min(reach, rows.shape[1] - best - len(p)) + 1)
+    windows = np.stack([rows[:, best + lag : best + lag + len(p)] for lag in lags], axis=1)  # beats × lags × samples
     windows = windows - windows.mean(axis=2, keepdims=True)
-    along = windows @ picture / size
+    along = windows @ p / size
     norms = np.sqrt((windows**2).sum(axis=2)) + 1e-12
     score = along / norms - 0.1 * (lags / reach) ** 2
     at = score.argmax(axis=1)
     of = np.arange(len(r))
-    alike, amount = along[of, at] / norms[of, at], along[of, at] / size
-    has = (alike > _ALIKE) & (amount > 0.4) & (amount < 2.5) & ~outside
+    alike_p, amount = along[of, at] / norms[of, at], along[of, at] / size
+    still, gone = _nearby(picture, r, uneven, alike, shown)
+    has = (alike_p > _ALIKE) & (amount > 0.4) & (amount < 2.5) & ~outside & still
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
-    state = np.where(has, "coupled", np.where((noise > _TOO_LOUD) | outside, "unknown", "absent")).astype(object)
-    onset = view.time(r, best + lags[at] + _parabola(score, at) + half) - lead_s
-    sure = np.where(has, np.clip(alike, 0.0, 1.0), 1.0 - np.clip(noise / 2, 0.0, 0.9))
+    silent = (noise > _TOO_LOUD) & ~gone | outside | (not picture.whole)
+    state = np.where(has, "coupled", np.where(silent, "unknown", "absent")).astype(object)
+    onset = view.time(r, best + lags[at] + _parabola(score, at) + len(p) // 2) - picture.lead_s
+    sure = np.where(has, np.clip(alike_p, 0.0, 1.0), 1.0 - np.clip(noise / 2, 0.0, 0.9))
     return state, np.where(has, onset, np.nan), sure
+
+
+def _nearby(
+    picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+    """Whether the beats around each R still hold the picture's P at its place, and whether they surely do not.
+
+    At its place, not where they look most like it: what is sought is found anywhere. By the median of what each of the beats around holds
+    of it; where intervals are uneven, as in fibrillation, three quarters of the beats must hold half as much. Surely not where the median
+    lies two of its standard errors below. Where T reaches into P, the picture stands: this would speak of T.
+    """
+    p = picture.values[: picture.own]
+    slope = np.arange(len(p)) - (len(p) - 1) / 2
+    p = p - p.mean() - slope * (slope @ p) / (slope @ slope)  # the end of T is a slope, which moves with the interval
+    amount = shown[:, picture.first : picture.first + picture.own] @ p / (p @ p)
+    known = np.isfinite(amount)
+    amount, place = amount[known], alike[known]
+    if len(amount) < _LOCAL or not picture.whole:
+        return np.ones(len(r), dtype=bool), np.zeros(len(r), dtype=bool)
+    first = np.clip(_nearest(place, r) - _LOCAL // 2, 0, len(amount) - _LOCAL)
+    around = np.sort(amount[first[:, None] + np.arange(_LOCAL)], axis=1)
+    low, middle, high = (around[:, round(share * (_LOCAL - 1))] for share in (0.25, 0.5, 0.75))
+    doubt = 1.2533 * (high - low) / 1.349 / _LOCAL**0.5
+    return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + 2 * doubt < _LOCAL_SHARE
+
+
+def _without(view: _View, quiet: Floats, r: Floats) -> NDArray[np.object_]:
+    """What beats show that show no P: ``absent`` where a small usual P would have been proven, ``unknown`` where it would not."""
+    state = np.full(len(r), "unknown", dtype=object)
+    half = round(0.5 * _P_WIDTH_S * view.lead.rate)
+    if len(quiet) < FEWEST or view.length < 2 * half:
+        return state  # T leaves no room for a P
+    step = quiet[:, half:-half] - np.maximum(quiet[:, : -2 * half], quiet[:, 2 * half :])
+    ordered = np.sort(step, axis=0)
+    spread = ordered[round(0.75 * (len(step) - 1))] - ordered[round(0.25 * (len(step) - 1))]
+    least = _PROVEN * 1.2533 * float(np.median(spread)) / 1.349 / len(quiet) ** 0.5
+    if least < _USUAL_P * view.qrs:
+        state[_roughness(view.rows(r)) < _LOUD_BEAT * np.median(_roughness(quiet))] = "absent"
+    return state
 
 
 def _parabola(score: Floats, at: NDArray[np.int64]) -> Floats:
@@ -280,27 +444,22 @@ def _parabola(score: Floats, at: NDArray[np.int64]) -> Floats:
     return np.where(middle == at, np.clip(shift, -0.5, 0.5), 0.0)
 
 
-def _marching(
-    lead: _Lead, r: Floats, near: NDArray, here: NDArray, marching: list[tuple[float, float]], cell: tuple[float, float]
-) -> tuple[NDArray, Floats, Floats]:
-    """P waves at a pace of their own, added to `marching` where they lie in the cell; without them the beats have none."""
-    nothing = np.full(len(here), np.nan)
+def _marching(lead: _Lead, r: Floats, near: NDArray[np.int64], cell: tuple[float, float]) -> list[tuple[float, float]] | None:
+    """Onset and confidence of the P waves of the cell, where they march at a pace of their own; None where none march."""
     first = max(lead.index(np.array([r[near[0]] - 1.0]))[0], 0)
     last = min(lead.index(np.array([r[near[-1]] + 1.0]))[0], len(lead.values))
     place = (r[near] - lead.start_s) * lead.rate - first
-    rest, loud = _without_qrst(lead.values[first:last], place, lead.rate)
-    found = _march(rest, place, lead.rate)
+    found = _march(_without_qrst(lead.values[first:last], place, lead.rate), place, lead.rate)
     if found is None:
-        return np.where(loud[np.searchsorted(near, here)], "unknown", "absent").astype(object), nothing, np.full(len(here), 0.8)
+        return None
     index, confidence = found
     onset = lead.start_s + (first + index) / lead.rate - _P_WIDTH_S / 2
     inside = (onset >= cell[0]) & (onset < cell[1])
-    marching += list(zip(onset[inside].tolist(), confidence[inside].tolist(), strict=True))
-    return np.full(len(here), "apart", dtype=object), nothing, np.full(len(here), 0.9)
+    return list(zip(onset[inside].tolist(), confidence[inside].tolist(), strict=True))
 
 
-def _without_qrst(values: Floats, place: Floats, rate: float) -> tuple[Floats, NDArray[np.bool_]]:
-    """A stretch less the median QRS–T of each kind of beat, and which beats are too loud to judge. `place` are the R in samples."""
+def _without_qrst(values: Floats, place: Floats, rate: float) -> Floats:
+    """A stretch less the median QRS–T of each kind of beat. `place` are the R in samples."""
     rest = values.copy()
     interval = float(np.median(np.diff(place))) / rate
     before, length = round(0.10 * rate), round((0.10 + min(0.55, interval - 0.12)) * rate)
@@ -321,8 +480,7 @@ def _without_qrst(values: Floats, place: Floats, rate: float) -> tuple[Floats, N
             for at in place[kind]:
                 first, last = np.clip([int(at) - before, int(at) - before + length], 0, len(rest) - 1)
                 rest[first : last + 1] = np.linspace(rest[first], rest[last], last + 1 - first)
-    quiet = np.interp(place[:, None] + offset, np.arange(len(rest)), rest).std(axis=1)
-    return rest, quiet > 4.0 * np.median(quiet)
+    return rest
 
 
 def _march(rest: Floats, place: Floats, rate: float) -> tuple[NDArray[np.int64], Floats] | None:
