@@ -142,6 +142,7 @@ def waves(
     found.seek("h", broad[1.0], found.time("y") + 0.08, next_r - 0.25)
     found.corner_c()
     found.corner_a()
+    found.corner_v(of_p)
     found.foot_z(sharp[-1.0], delay_s)
     return found.table()
 
@@ -481,10 +482,20 @@ class _Found:
         found.time[:], found.state[:] = time, "fused"
         self.join("a", found)
 
+    def corner_v(self, of_p: _Hits) -> None:
+        """Where a cannon a of late systole hides v: the corner of the slope from it to y."""
+        a = np.append(np.sort(of_p.time[np.isfinite(of_p.time)]), np.inf)
+        start = a[np.searchsorted(a, self.r + 0.16)]
+        rows = self.usable & np.isnan(self.hits["v"].time) & (start < self.time("y"))
+        at, time = self._corner(rows, np.where(np.isfinite(start), start, np.nan), self.time("y"), self.place("v"), 0.02, reach_s=0.15)
+        hits = self.hits["v"]
+        hits.time[at], hits.state[at], hits.evidence[at] = time, "fused", np.nan
+        self.of_beat["v"][at] = time
+
     def _corner(
-        self, rows: NDArray[np.bool_], start: Floats, stop: Floats, place: Floats, least: float
+        self, rows: NDArray[np.bool_], start: Floats, stop: Floats, place: Floats, least: float, *, reach_s: float = 2.5 * _REACH_S["c"]
     ) -> tuple[NDArray[np.int64], Floats]:
-        """Beats, and in each the point near a place that lies farthest above the straight line from start to stop.
+        """Beats, and in each the point within reach of a place that lies farthest above the straight line from start to stop.
 
         Only those that lie above it by a share of the picture's height.
         """
@@ -495,7 +506,7 @@ class _Found:
         time = start[at, None] + (stop - start)[at, None] * share
         level = self.read.at(time)
         above = level - (level[:, :1] + (level[:, -1:] - level[:, :1]) * share)
-        above[np.abs(time - place[at, None]) > 2.5 * _REACH_S["c"]] = -np.inf
+        above[np.abs(time - place[at, None]) > reach_s] = -np.inf
         best = above.argmax(axis=1)
         height = above[np.arange(len(at)), best]
         good = np.isfinite(height) & (height > least * self.span[self.which][at])
