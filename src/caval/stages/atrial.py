@@ -19,8 +19,9 @@ from scipy import ndimage, signal
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
+from caval.stages._evidence import GRID_S
 from caval.stages._sequence import best_sequence
-from caval.stages._signal import Thin, cut, fill, lowpass, moving_mean
+from caval.stages._signal import Thin, cut, fill, grid, lowpass, moving_mean
 
 __all__ = ["atrial"]
 
@@ -157,25 +158,38 @@ def _thin(ecg: Signal) -> _Lead | None:
     if missing.mean() > 0.9 or len(values) < 4 * ecg.sampling_rate or np.ptp(values) == 0:
         return None
     thin = Thin.of(ecg, _EVERY_S)
-    coarse = thin.take(moving_mean(_without_spikes(values, ecg.sampling_rate), thin.step))
+    coarse = thin.take(moving_mean(_without_spikes(values, ecg), thin.step))
     rate = ecg.sampling_rate / thin.step
     wander = moving_mean(moving_mean(coarse, round(0.9 * rate)), round(0.9 * rate))
     return _Lead(lowpass(coarse - wander, rate, _LOWPASS_HZ), rate, ecg.start_s + thin.offset / ecg.sampling_rate)
 
 
-def _without_spikes(values: Floats, rate: float) -> Floats:
-    """The ECG without pacing spikes, which thinning would widen into bumps: a deflection that is over within four milliseconds, on either
-    side of which the trace goes on as before, gives way to the median around it."""
+def _without_spikes(values: Floats, ecg: Signal) -> Floats:
+    """The ECG without pacing spikes, which thinning would widen into bumps.
+
+    A deflection that is over within four milliseconds, on either side of which the trace goes on as before, gives way to the median around
+    it. What is tall is told by the minute of the record, not by the block.
+    """
+    rate = ecg.sampling_rate
     reach = max(1, round(_SPIKE_S * rate))
     if rate < 240 or len(values) < 4 * reach:
         return values
-    bend = np.abs(2 * values[reach:-reach] - values[: -2 * reach] - values[2 * reach :])
-    low, high = np.percentile(values[:: max(1, round(rate / 100))], [0.5, 99.5])
-    sharp = np.flatnonzero(bend > 2 * _SPIKE * (high - low)) + reach
-    if not len(sharp):
+    bend = np.zeros(len(values))
+    bend[reach:-reach] = np.abs(2 * values[reach:-reach] - values[: -2 * reach] - values[2 * reach :])
+    step = max(1, round(rate / 100))
+    sharp = []
+    for start_s, stop_s in grid(ecg.start_s, ecg.stop_s, GRID_S):
+        first, last = (int(np.clip(np.ceil(ecg.position(t) - 1e-6), 0, len(values))) for t in (start_s, stop_s))
+        offset = -round(ecg.start_s * rate + first) % step  # counted from the start of the record
+        some = values[first + offset : last : step]
+        if len(some):
+            low, high = np.percentile(some, [0.5, 99.5])
+            sharp.append(first + np.flatnonzero(bend[first:last] > 2 * _SPIKE * (high - low)))
+    at = np.concatenate(sharp) if sharp else np.empty(0, np.int64)
+    if not len(at):
         return values
     out = values.copy()
-    out[sharp] = np.median(cut(values, sharp - 2 * reach, 4 * reach + 1), axis=1)
+    out[at] = np.median(cut(values, at - 2 * reach, 4 * reach + 1), axis=1)
     return out
 
 

@@ -13,7 +13,7 @@ from dataclasses import dataclass, fields
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
-from scipy import signal
+from scipy import ndimage, signal
 
 from caval import tables
 from caval.recording import Signal
@@ -49,6 +49,10 @@ _P_TO_A_S, _LATEST_S = 0.090, 0.08
 """From P to a at the heart (0.08 to 0.10 s, from memory), and the longest delay that z is read with."""
 _EARLY = 0.8
 """Share of the usual interval below which a beat is early: its P, if it has one, is not where it usually is."""
+_FEW_BEATS = 4
+"""Beats either way that tell whether P and evenness are lost."""
+_UNEVEN = 0.09
+"""Median difference of successive intervals over the usual interval, from which they are uneven; see the rhythm stage."""
 _LATEST_CANNON_S = 0.25
 _INTO_NEXT_S = 0.12
 """How far past the next R v and y may stand: in a fast heart, through a line, they do."""
@@ -128,7 +132,7 @@ def waves(
     for wave in "vy":
         found.sharpen(wave, sharp[1.0 if WAVES[wave].is_peak else -1.0])
     bounds = np.fmax(r - 0.30, found.before()), np.minimum(r + _LATEST_CANNON_S, found.time("x") - 0.05)
-    found.seek("a", sharp[1.0], *bounds, rows=found.without_a(of_p))
+    found.seek("a", sharp[1.0], *bounds, rows=found.without_a(of_p, coupling))
     found.join("a", of_p)
     broad[1.0].take_near(found.time("a"))
     found.seek("c", sharp[1.0], np.fmax(r + 0.02, found.time("a") + 0.04), np.fmin(found.time("x"), found.time("v") - 0.05) - 0.02)
@@ -138,6 +142,7 @@ def waves(
     found.seek("h", broad[1.0], found.time("y") + 0.08, next_r - 0.25)
     found.corner_c()
     found.corner_a()
+    found.corner_v(of_p)
     found.foot_z(sharp[-1.0], delay_s)
     return found.table()
 
@@ -358,13 +363,21 @@ class _Found:
         v[hidden] = self.hits["v"].time[hidden] = np.nan
         return np.where(hidden, before, np.nan)
 
-    def without_a(self, of_p: _Hits) -> NDArray[np.bool_]:
+    def without_a(self, of_p: _Hits, coupling: pd.DataFrame | None) -> NDArray[np.bool_]:
         """Beats whose a is sought at a fixed place from R, where the picture has one: those that come in time and have none after a P.
 
-        A lead may hide the P of a beat; the pressure decides whether there is an a.
+        A lead may hide the P of a beat; the pressure decides whether there is an a. But where beats have lost their P and their evenness,
+        as when fibrillation begins, the picture is still that of the rhythm before and says nothing of them.
         """
         in_time = ~(np.diff(self.r, prepend=np.nan) < _EARLY * self.interval[self.which])
-        return in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
+        lacking = in_time & ~np.isin(self.beat, of_p.beat[np.isfinite(of_p.time)])
+        if coupling is None or not len(coupling):
+            return lacking
+        state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).to_numpy(object)
+        interval = np.diff(self.r, prepend=self.r[0])
+        uneven = ndimage.median_filter(np.abs(np.diff(interval, prepend=interval[0])), 2 * _FEW_BEATS + 1, mode="nearest")
+        gone = ndimage.uniform_filter1d((state == "absent").astype(float), 2 * _FEW_BEATS + 1, mode="nearest") > 0.5
+        return lacking & ~(gone & (uneven > _UNEVEN * self.interval[self.which]))
 
     def join(self, wave: str, more: _Hits) -> None:
         """Add marks to those of a wave; the last before R stands for the beat."""
@@ -469,10 +482,20 @@ class _Found:
         found.time[:], found.state[:] = time, "fused"
         self.join("a", found)
 
+    def corner_v(self, of_p: _Hits) -> None:
+        """Where a cannon a of late systole hides v: the corner of the slope from it to y."""
+        a = np.append(np.sort(of_p.time[np.isfinite(of_p.time)]), np.inf)
+        start = a[np.searchsorted(a, self.r + 0.16)]
+        rows = self.usable & np.isnan(self.hits["v"].time) & (start < self.time("y"))
+        at, time = self._corner(rows, np.where(np.isfinite(start), start, np.nan), self.time("y"), self.place("v"), 0.02, reach_s=0.15)
+        hits = self.hits["v"]
+        hits.time[at], hits.state[at], hits.evidence[at] = time, "fused", np.nan
+        self.of_beat["v"][at] = time
+
     def _corner(
-        self, rows: NDArray[np.bool_], start: Floats, stop: Floats, place: Floats, least: float
+        self, rows: NDArray[np.bool_], start: Floats, stop: Floats, place: Floats, least: float, *, reach_s: float = 2.5 * _REACH_S["c"]
     ) -> tuple[NDArray[np.int64], Floats]:
-        """Beats, and in each the point near a place that lies farthest above the straight line from start to stop.
+        """Beats, and in each the point within reach of a place that lies farthest above the straight line from start to stop.
 
         Only those that lie above it by a share of the picture's height.
         """
@@ -483,7 +506,7 @@ class _Found:
         time = start[at, None] + (stop - start)[at, None] * share
         level = self.read.at(time)
         above = level - (level[:, :1] + (level[:, -1:] - level[:, :1]) * share)
-        above[np.abs(time - place[at, None]) > 2.5 * _REACH_S["c"]] = -np.inf
+        above[np.abs(time - place[at, None]) > reach_s] = -np.inf
         best = above.argmax(axis=1)
         height = above[np.arange(len(at)), best]
         good = np.isfinite(height) & (height > least * self.span[self.which][at])
