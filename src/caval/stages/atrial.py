@@ -48,10 +48,12 @@ _PROVEN = 6.0
 """Bump of the median over its standard error from which a P is proven: one in 10⁸ by chance at one place, one in 10⁶ over the window."""
 _ALIKE = 0.55
 """Correlation with the median's P from which a beat has its own P."""
+_SOME_P, _MOST_P = 0.4, 2.5
+"""Share of the picture's P that a beat must hold, and may; one that holds the first and does not look like P is not without P."""
 _TOO_LOUD = 0.7
 """What of a beat's window is not P, over P, above which a lacking likeness says nothing. Where most beats are as loud, P may march."""
 _QUIET = 1.5
-"""Roughness, over that of the quietest quarter, up to which a beat takes part in the picture."""
+"""Roughness, over that of the quietest quarter, up to which a beat takes part in the picture, and up to which its lack of P counts."""
 _LOCAL, _LOCAL_SHARE = 15, 0.5
 """Beats that must hold, by their median, this share of the picture's P: a rhythm may begin within the two minutes of a picture."""
 _UNEVEN = 0.09
@@ -60,8 +62,6 @@ _USUAL_P = 0.1
 """Height over that of the QRS complex of a small usual P (common practice). Where none could have been proven, its lack says nothing."""
 _SPIKE, _SPIKE_S = 0.15, 0.004
 """A pacing spike is bent by this share of the height of the trace within this time."""
-_LOUD_BEAT = 4.0
-"""Roughness of a beat over that of the quieter ones from which its lacking P says nothing."""
 _REACH_S = 0.05
 _FASTEST_S, _SLOWEST_S = 0.33, 1.7
 """Intervals between P waves that are tried when they march."""
@@ -115,16 +115,17 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
             continue  # T runs into the next QRS complex: a P could not be seen
         cell = ((k - 0.5) * KNOT_S, (k + 0.5) * KNOT_S)
         rows = view.rows(r[alike])
-        quiet = _quiet(rows)
+        calm = _calm(rows)
+        quiet = rows[_roughness(rows) <= calm]
         picture = _Picture.of(view, quiet)
         march = _marching(lead, r, near, cell) if picture is None or picture.doubtful else None
         if march is not None:
             marching += march
             state[here], sure[here] = "apart", 0.9
         elif picture is not None:
-            state[here], onset[here], sure[here] = _each(view, picture, r[here], uneven[here], r[alike], rows)
+            state[here], onset[here], sure[here] = _each(view, picture, r[here], uneven[here], r[alike], rows, calm)
         else:
-            state[here], sure[here] = _without(view, quiet, r[here]), 0.8
+            state[here], sure[here] = np.where(_roughness(view.rows(r[here])) <= calm, _without(view, quiet), "unknown"), 0.8
     onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
     atria = _atria(beats, r, onset, sure, np.round(np.array(marching).reshape(-1, 2), 6))
     return atria, _coupling(beats, state, r - onset, sure)
@@ -224,17 +225,14 @@ def _interval(r: Floats, rows: NDArray[np.int64]) -> float:
     return float(np.median(r[rows] - r[rows - 1]))
 
 
-def _quiet(rows: Floats) -> Floats:
-    """The rows inside the record that are about as quiet as the quieter half: diathermy on many beats must not hide the P of the others."""
-    rows = rows[np.isfinite(rows).all(axis=1)]
-    if len(rows) < 2 * FEWEST:
-        return rows
-    loud = _roughness(rows)
-    return rows[loud <= _QUIET * np.sort(loud)[len(loud) // 4]]
+def _calm(rows: Floats) -> float:
+    """Roughness up to which rows are about as quiet as the quietest: diathermy on many beats must not hide the P of the others."""
+    rough = np.sort(_roughness(rows[np.isfinite(rows).all(axis=1)]))
+    return float(_QUIET * rough[len(rough) // 4]) if len(rough) >= 2 * FEWEST else np.inf
 
 
 def _roughness(rows: Floats) -> Floats:
-    """Root mean square of the steps from sample to sample of each row."""
+    """Root mean square of the steps from sample to sample of each row; NaN where a row is."""
     step = rows[:, 1:] - rows[:, :-1]
     return np.asarray(np.sqrt(np.einsum("ij,ij->i", step, step) / step.shape[1]))
 
@@ -380,10 +378,10 @@ class _View:
 
 
 def _each(
-    view: _View, picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+    view: _View, picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats, calm: float
 ) -> tuple[NDArray, Floats, Floats]:
     """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are the R that the picture
-    was sought among and `shown` their rows: they show whether P is still there."""
+    was sought among and `shown` their rows: they show whether P is still there. Rows rougher than `calm` deny no P."""
     rate, p, best = view.lead.rate, picture.values, picture.first
     size = float(np.linalg.norm(p))
     rows = view.rows(r)
@@ -400,9 +398,9 @@ def _each(
     of = np.arange(len(r))
     alike_p, amount = along[of, at] / norms[of, at], along[of, at] / size
     still, gone = _nearby(picture, r, uneven, alike, shown)
-    has = (alike_p > _ALIKE) & (amount > 0.4) & (amount < 2.5) & ~outside & still
+    has = (alike_p > _ALIKE) & (amount > _SOME_P) & (amount < _MOST_P) & ~outside & still
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
-    silent = (noise > _TOO_LOUD) & ~gone | outside | (not picture.whole)
+    silent = ((noise > _TOO_LOUD) | (amount > _SOME_P) | (_roughness(rows) > calm)) & ~gone | outside | (not picture.whole)
     state = np.where(has, "coupled", np.where(silent, "unknown", "absent")).astype(object)
     onset = view.time(r, best + lags[at] + _parabola(score, at) + len(p) // 2) - picture.lead_s
     sure = np.where(has, np.clip(alike_p, 0.0, 1.0), 1.0 - np.clip(noise / 2, 0.0, 0.9))
@@ -433,19 +431,16 @@ def _nearby(
     return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + 2 * doubt < _LOCAL_SHARE
 
 
-def _without(view: _View, quiet: Floats, r: Floats) -> NDArray[np.object_]:
-    """What beats show that show no P: ``absent`` where a small usual P would have been proven, ``unknown`` where it would not."""
-    state = np.full(len(r), "unknown", dtype=object)
+def _without(view: _View, quiet: Floats) -> str:
+    """What beats show whose quiet ones prove no P: ``absent`` where a small usual P would have been proven, else ``unknown``."""
     half = round(0.5 * _P_WIDTH_S * view.lead.rate)
     if len(quiet) < FEWEST or view.length < 2 * half:
-        return state  # T leaves no room for a P
+        return "unknown"  # T leaves no room for a P
     step = quiet[:, half:-half] - np.maximum(quiet[:, : -2 * half], quiet[:, 2 * half :])
     ordered = np.sort(step, axis=0)
     spread = ordered[round(0.75 * (len(step) - 1))] - ordered[round(0.25 * (len(step) - 1))]
     least = _PROVEN * 1.2533 * float(np.median(spread)) / 1.349 / len(quiet) ** 0.5
-    if least < _USUAL_P * view.qrs:
-        state[_roughness(view.rows(r)) < _LOUD_BEAT * np.median(_roughness(quiet))] = "absent"
-    return state
+    return "absent" if least < _USUAL_P * view.qrs else "unknown"
 
 
 def _parabola(score: Floats, at: NDArray[np.int64]) -> Floats:
