@@ -12,12 +12,15 @@ import caval
 from caval import tables
 from caval.api import given_beats
 from caval.errors import InputError
+from caval.model.scenario import scenario_names
 from caval.model.simulate import simulate
 from caval.stages.delay import delay
 
 PRIOR, P_TO_A, R_TO_C = (0.030, 0.030), (0.090, 0.012), (0.080, 0.020)
 """Mean and SD, seconds, as the stage's docstring states them."""
 LINES = (0.0, 0.02, 0.04, 0.06)
+UNLIKE = ("chronic_regurgitation", "tamponade")
+"""Hearts in which a or c comes earlier or later than usual by more than hearts vary."""
 
 
 def drawn(p_a_s: float | None, r_c_s: float | None, *, n: int = 60, state: str = "clear") -> tuple[pd.DataFrame, ...]:
@@ -115,13 +118,17 @@ def test_a_longer_line_is_told_from_a_shorter_one(scenario):
     assert 0.6 < slope < 1.1  # the prior draws towards what is usual: 0.69 of a change is kept when c alone is seen, 0.9 with a
 
 
+def inside(scenario: str) -> list[bool]:
+    return [abs(stated - true) <= 2 * sd for stated, sd, true in (measured(scenario, line) for line in LINES[::3])]
+
+
 def test_the_stated_interval_holds_the_truth():
     """Not an outside check of the heart's own delay: the model was calibrated to the published 80 to 100 ms that the stage starts from."""
-    scenarios = (
-        "healthy", "first_degree_block", "paced", "fibrillation", "right_ventricular_failure", "hypovolaemia_bolus", "child",
-        "complete_block", "constriction", "chronic_regurgitation", "tamponade", "tachycardia",
-    )
-    inside = [abs(stated - true) <= 2 * sd for s in scenarios for stated, sd, true in (measured(s, line) for line in LINES[::3])]
-    assert np.mean(inside) >= 0.80
-    usual = [abs(stated - true) <= 2 * sd for s in scenarios[:7] for stated, sd, true in (measured(s, line) for line in LINES[::3])]
-    assert np.mean(usual) >= 0.90
+    hearts = [name for name in scenario_names() if name not in UNLIKE]
+    assert np.mean([hit for name in hearts for hit in inside(name)]) >= 0.90  # the aim set for this stage
+
+
+@pytest.mark.parametrize("scenario", UNLIKE)
+@pytest.mark.xfail(strict=True, reason="a heart whose own delay is not the usual one: the trace alone cannot tell it from the line's")
+def test_hearts_unlike_others_mislead(scenario):
+    assert all(inside(scenario))
