@@ -56,6 +56,7 @@ _QUIET = 1.5
 """Roughness, over that of the quietest quarter, up to which a beat takes part in the picture, and up to which its lack of P counts."""
 _LOCAL, _LOCAL_SHARE = 15, 0.5
 """Beats that must hold, by their median, this share of the picture's P: a rhythm may begin within the two minutes of a picture."""
+_ONE_SIDED = 1.645
 _UNEVEN = 0.09
 """Median change of successive intervals over the median interval from which they are uneven, as in the rhythm stage."""
 _USUAL_P = 0.1
@@ -413,8 +414,8 @@ def _nearby(
     """Whether the beats around each R still hold the picture's P at its place, and whether they surely do not.
 
     At its place, not where they look most like it: what is sought is found anywhere. By the median of what each of the beats around holds
-    of it; where intervals are uneven, as in fibrillation, three quarters of the beats must hold half as much. Surely not where the median
-    lies two of its standard errors below. Where T reaches into P, the picture stands: this would speak of T.
+    of it; where intervals are uneven, as in fibrillation, three quarters of the beats must hold half as much. Surely not where the
+    median lies below by more than its doubt (one-sided, 95 %). Where T reaches into P, the picture stands: this would speak of T.
     """
     p = picture.values[: picture.own]
     slope = np.arange(len(p)) - (len(p) - 1) / 2
@@ -428,7 +429,7 @@ def _nearby(
     around = np.sort(amount[first[:, None] + np.arange(_LOCAL)], axis=1)
     low, middle, high = (around[:, round(share * (_LOCAL - 1))] for share in (0.25, 0.5, 0.75))
     doubt = 1.2533 * (high - low) / 1.349 / _LOCAL**0.5
-    return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + 2 * doubt < _LOCAL_SHARE
+    return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + _ONE_SIDED * doubt < _LOCAL_SHARE
 
 
 def _without(view: _View, quiet: Floats) -> str:

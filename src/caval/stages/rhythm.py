@@ -76,9 +76,10 @@ def rhythm(
         return tables.empty("rhythms")
     interval = np.diff(r, prepend=np.nan)
     interval[interval > _LONGEST_S] = np.nan
-    usual = _median(interval, _AROUND)
+    usual = _median((interval + np.append(interval[1:], np.nan)) / 2, _AROUND)  # of an early beat and its pause, half of both
     uneven = _median(np.abs(np.diff(interval, prepend=np.nan)), _AROUND_UNEVEN) / usual
-    state = beats["beat"].map(coupling.set_index("beat")["p"]).fillna("unknown").to_numpy(object)
+    state = beats["beat"].map(coupling.set_index("beat")["p"]).astype(object)
+    state = state.where(state.notna(), "unknown").to_numpy(object)
     share = {key: _share(state == key, state != "unknown") for key in ("coupled", "apart", "absent")}
     share["a"] = _share(*_with_a(beats, marks))
     spiked = _share(_spikes(ecg, r), np.ones(len(r), dtype=bool)) > 0.5
