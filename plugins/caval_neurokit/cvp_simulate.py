@@ -2,17 +2,19 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
 from caval.errors import InputError
-from caval.model.simulate import Simulation, simulate
 from caval.vocabulary import WAVES
 from caval_neurokit._inputs import as_rate
 from caval_neurokit._marked import R_COLUMN, column_of
+
+if TYPE_CHECKING:
+    from caval.model.simulate import Simulation
 
 __all__ = ["cvp_simulate"]
 
@@ -74,6 +76,8 @@ def cvp_simulate(
     changes: dict[str, Any] = {name.replace("__", "."): value for name, value in settings.items()} | {"line.noise_mmhg": float(noise)}
     if heart_rate is not None:
         changes["rhythm.heart_rate"] = float(heart_rate)
+    from caval.model.simulate import simulate  # the model compiles its loop; whoever marks a record need not wait for that
+
     made = simulate(scenario, minutes=duration / 60, seed=random_state, settings=changes)
     n = round(duration * rate)
     signals = pd.DataFrame({name: _resampled(made, label, rate, n) for name, label in (("CVP", "CVP"), ("ECG", "ECG II"), ("ABP", "ABP"))})
