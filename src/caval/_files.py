@@ -72,7 +72,7 @@ def _move(made: Sequence[Path], directory: Path, aside: Path) -> list[Path]:
                 os.replace(target, aside / source.name)
             placed.append(target)
             os.replace(source, target)
-    except BaseException:
+    except BaseException:  # an interruption from the keyboard must not leave a mix of two runs either; it goes on from here
         for target in placed:
             target.unlink(missing_ok=True)
             if (aside / target.name).exists():

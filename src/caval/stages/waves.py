@@ -3,7 +3,7 @@
 A running picture of the cardiac cycle (the median of the R-aligned beats of the two minutes around, on a fixed grid) says where each wave
 is to be expected; the single beat decides. The a is sought after its P, wherever that falls, and before R where no P is known. A mark
 stands on an extremum of the beat's own trace; where c has run into the slope between a and x it is the corner of that slope and called
-fused; where nothing is, or nothing that has a place, nothing is marked.
+fused, as an a that has run into c, and a v that a cannon wave hides; where nothing is, nothing is marked.
 """
 
 from __future__ import annotations
@@ -63,10 +63,6 @@ _SHARPEN_S = 0.024
 _NOISE_STEP_S, _NOISE_CELL_S = 0.008, 10.0
 _WEAK_MMHG = 0.12
 """An extremum lower than this, or than twice the noise, is weak."""
-_BEND_S = 0.05
-_NO_PLACE = 1.2
-"""Bend over 50 ms either way, in noises of the samples in the waves' band, below which the noise moves the top of a wave by more than 30 ms
-(a parabola through three points: SD of its top = h·noise/(√2·bend)): it has no place and is not marked."""
 
 
 @stage(name="waves", gives=("marks",), margin_s=150.0)
@@ -151,8 +147,6 @@ def _traces(cvp: Signal, values: Floats, smooth_hz: float, fine_hz: float) -> tu
     """The trace on which broad waves are sought, low-passed at `smooth_hz`, and that on which narrow ones are sought and all are read.
 
     The second is low-passed at `fine_hz` where it is quiet, at `smooth_hz` where it is not, and blended between.
-
-    The noise is that of the third differences over steps of 8 ms, in which no wave is left, in cells of a fixed grid.
     """
     rate = cvp.sampling_rate
     smooth, fine = lowpass(values, rate, smooth_hz), lowpass(values, rate, fine_hz)
@@ -165,7 +159,10 @@ def _traces(cvp: Signal, values: Floats, smooth_hz: float, fine_hz: float) -> tu
 
 
 def _noise(cvp: Signal, values: Floats) -> tuple[Floats, Floats]:
-    """Centres of the cells (s) and the SD of the samples' noise in them (mmHg), samples taken 8 ms apart."""
+    """Centres of cells of a fixed grid (s) and the SD of the noise in them (mmHg), of samples taken 8 ms apart.
+
+    It is that of their third differences, in which no wave is left.
+    """
     step = max(1, round(_NOISE_STEP_S * cvp.sampling_rate))
     first = -round(cvp.start_s * cvp.sampling_rate) % step
     steady = np.abs(np.diff(moving_mean(values, step)[first::step], 3))
