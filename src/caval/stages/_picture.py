@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from caval.recording import Signal
 from caval.stages._label import MedianBeat, label
+from caval.stages._signal import median_error, uneven
 
 __all__ = ["Picture", "running_pictures"]
 
@@ -24,8 +25,8 @@ FEWEST = 4
 """Beats below which no picture is made."""
 _BEYOND_S = 0.12
 """The picture reaches this far past the next R: in a fast heart v and y stand there."""
-_REGULAR = 0.08
-"""Robust coefficient of variation of the intervals up to which a rhythm is regular."""
+_AROUND = 15
+"""Beats that tell whether the intervals are uneven."""
 _P_REACH_S = 0.34
 _P_TO_A_S = (0.06, 0.24)
 """Where a may stand after the onset of P: 0.08 to 0.10 s at the heart (from memory), and the delay of the line."""
@@ -85,6 +86,7 @@ def running_pictures(
     traces = traces - level[:, None]
     states, pr = _atrial_of(beats, coupling)
     p = np.empty(0) if atria is None else atria["time_s"].to_numpy(float)
+    ragged = uneven(r, _AROUND)
     pictures = []
     for k in range(int(np.floor(r[0] / KNOT_S)), int(np.ceil(r[-1] / KNOT_S)) + 1):
         centre = k * KNOT_S
@@ -95,7 +97,7 @@ def running_pictures(
         even = rows[(np.abs(before[rows] / usual - 1) < 0.15) & (np.abs(after[rows] / usual - 1) < 0.15)]
         chosen = even if len(even) >= max(FEWEST, 0.3 * len(rows)) else rows
         atrial = _most(states[rows])
-        regular = _spread(after[rows]) < _REGULAR
+        regular = bool(ragged[rows].mean() < 0.5)
         near_p = p[np.abs(p - centre) <= NEIGHBOURS_S]
         pr_s = float(np.nanmedian(pr[chosen])) if atrial == "coupled" and np.isfinite(pr[chosen]).any() else np.nan
         pictures.append(_picture(centre, grid_s, traces[chosen], usual, atrial, pr_s, regular, smooth, near_p))
@@ -122,12 +124,6 @@ def _most(states: NDArray[np.object_]) -> str:
     return str(names[np.argmax(counts)])
 
 
-def _spread(intervals: Floats) -> float:
-    """Robust coefficient of variation of successive differences: slow changes of rate do not count."""
-    steps = np.abs(np.diff(intervals[np.isfinite(intervals)]))
-    return float(1.4826 * np.median(steps) / 2.0**0.5 / np.nanmedian(intervals)) if len(steps) else 0.0
-
-
 def _picture(
     centre_s: float, grid_s: Floats, traces: Floats, interval_s: float, atrial: str, pr_s: float, regular: bool, smooth: Signal, p: Floats
 ) -> Picture:
@@ -142,7 +138,7 @@ def _picture(
     noise = 1.4826 * float(np.median(steps[np.isfinite(steps)])) / 2.0**0.5
     cycle = time < interval_s
     span = float(np.ptp(median[cycle])) or 1e-9
-    doubt = 1.2533 * (high - low) / 1.349 / len(traces) ** 0.5  # standard error of a median, by the normal law
+    doubt = median_error(low, high, len(traces))
     places = label(MedianBeat(time, median, doubt, interval_s, span, noise / len(traces) ** 0.5, atrial, pr_s, regular))
     p_to_a = places.get("a", np.nan) + pr_s if atrial == "coupled" else _after_p(smooth, p) if atrial == "apart" else np.nan
     return Picture(centre_s, time, median, interval_s, span, noise, places, atrial, p_to_a, pr_s)

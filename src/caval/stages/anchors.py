@@ -23,7 +23,7 @@ from caval.recording import Signal
 from caval.registry import stage
 from caval.stages._evidence import ALIKE, MARGIN_S, Evidence, ecg_evidence, no_evidence
 from caval.stages._sequence import best_sequence, kinds
-from caval.stages._signal import cut, fill, lowpass
+from caval.stages._signal import cut, fill, lowpass, nearest
 from caval.stages._transit import Transit, learn_transit
 from caval.stages._venous import venous_beats
 
@@ -160,7 +160,7 @@ def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
         own = other[np.diff(other, prepend=-np.inf) > _SAME_S]
     votes = np.full(len(own), -0.25)
     if len(own) and len(other):
-        at = _nearest(own, other)
+        at = nearest(own, other)
         far = np.abs(own[at] - other) > _SAME_S
         votes[np.unique(at[~far])] = 0.25
         lone = other[far][np.diff(other[far], prepend=-np.inf) > _SAME_S]
@@ -168,14 +168,6 @@ def _merge(time: Floats, names: NDArray) -> tuple[Floats, Floats]:
         order = np.argsort(own, kind="stable")
         own, votes = own[order], votes[order]
     return own, votes
-
-
-def _nearest(sorted_times: Floats, query: Floats) -> NDArray[np.int64]:
-    """Index of the nearest of `sorted_times` for each query time."""
-    right = np.clip(np.searchsorted(sorted_times, query), 1, max(1, len(sorted_times) - 1))
-    left = right - 1
-    right = np.minimum(right, len(sorted_times) - 1)
-    return np.where(np.abs(sorted_times[right] - query) < np.abs(query - sorted_times[left]), right, left)
 
 
 def _strength(abp: Signal, feet: Floats) -> Floats:
@@ -233,7 +225,7 @@ def _pool(votes: Floats, feet: Floats, strength: Floats, evidence: Evidence, tra
     explained = np.zeros(len(feet), dtype=bool)
     sure = np.sort(events[ecg_says > _DOUBT])
     if len(sure) and len(feet):
-        explained = np.abs(sure[_nearest(sure, expected)] - expected) < _SAME_S
+        explained = np.abs(sure[nearest(sure, expected)] - expected) < _SAME_S
     lone, lone_strength = expected[~explained], strength[~explained]
     heard = np.interp(lone, evidence.quiet_at_s, evidence.quiet_level)
     time = np.concatenate([events, lone])

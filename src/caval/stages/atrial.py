@@ -19,19 +19,17 @@ from scipy import ndimage, signal
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._evidence import GRID_S
+from caval.stages._picture import KNOT_S, NEIGHBOURS_S
 from caval.stages._sequence import best_sequence
-from caval.stages._signal import Thin, cut, fill, grid, lowpass, moving_mean
+from caval.stages._signal import cut, lowpass, median_error, moving_mean, nearest, uneven
+from caval.stages.detect import clean_ecg, thinned
 
 __all__ = ["atrial"]
 
 Floats = NDArray[np.float64]
 
-KNOT_S = 30.0
-NEIGHBOURS_S = 60.0
 FEWEST = 6
 """Beats below which nothing is said of the atria."""
-_EVERY_S = 0.008
 _LOWPASS_HZ = 25.0
 _P_WIDTH_S = 0.11
 """Length of a P wave (below 0.12 s in adults, common practice); its top is taken to lie in its middle."""
@@ -57,12 +55,8 @@ _QUIET = 1.5
 _LOCAL, _LOCAL_SHARE = 15, 0.5
 """Beats that must hold, by their median, this share of the picture's P: a rhythm may begin within the two minutes of a picture."""
 _ONE_SIDED = 1.645
-_UNEVEN = 0.09
-"""Median change of successive intervals over the median interval from which they are uneven, as in the rhythm stage."""
 _USUAL_P = 0.1
 """Height over that of the QRS complex of a small usual P (common practice). Where none could have been proven, its lack says nothing."""
-_SPIKE, _SPIKE_S = 0.15, 0.004
-"""A pacing spike is bent by this share of the height of the trace within this time."""
 _REACH_S = 0.05
 _FASTEST_S, _SLOWEST_S = 0.33, 1.7
 """Intervals between P waves that are tried when they march."""
@@ -96,7 +90,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
         A row a beat: ``beat, r_time_s, p, pr_s, confidence``. `p` is ``coupled``; ``apart`` where P waves march at a pace of their own;
         ``absent`` where the lead is quiet enough to show a P and shows none; ``unknown`` where it is not.
     """
-    lead = None if ecg is None else _thin(ecg)
+    lead = None if ecg is None else _lead(ecg)
     r = beats["r_time_s"].to_numpy(float)
     normal = (beats["kind"] == "normal").to_numpy() if "kind" in beats else np.ones(len(r), dtype=bool)
     if len(r) < FEWEST or lead is None:
@@ -104,7 +98,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
     state = np.full(len(r), "unknown", dtype=object)
     onset, sure = np.full(len(r), np.nan), np.zeros(len(r))
     marching: list[tuple[float, float]] = []
-    uneven = _uneven(r)
+    ragged = uneven(r, _LOCAL)
     for k in range(int(np.floor(r[0] / KNOT_S)), int(np.ceil(r[-1] / KNOT_S)) + 1):
         here = np.flatnonzero((r >= (k - 0.5) * KNOT_S) & (r < (k + 0.5) * KNOT_S))
         near = np.flatnonzero(np.abs(r - k * KNOT_S) <= NEIGHBOURS_S)
@@ -124,7 +118,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
             marching += march
             state[here], sure[here] = "apart", 0.9
         elif picture is not None:
-            state[here], onset[here], sure[here] = _each(view, picture, r[here], uneven[here], r[alike], rows, calm)
+            state[here], onset[here], sure[here] = _each(view, picture, r[here], ragged[here], r[alike], rows, calm)
         else:
             state[here], sure[here] = np.where(_roughness(view.rows(r[here])) <= calm, _without(view, quiet), "unknown"), 0.8
     onset, sure = np.round(onset, 6), np.round(sure, 6)  # the ends of a filtered block reach far, but not that high
@@ -134,7 +128,7 @@ def atrial(beats: pd.DataFrame, ecg: Signal | None = None) -> tuple[pd.DataFrame
 
 @dataclass(frozen=True, eq=False)
 class _Lead:
-    """The ECG in steps of about 8 ms, without its slow wander."""
+    """The ECG at about 125 Hz, without its slow wander."""
 
     values: Floats
     rate: float
@@ -153,45 +147,15 @@ class _Lead:
         return rows
 
 
-def _thin(ecg: Signal) -> _Lead | None:
-    """The lead in steps of about 8 ms; None where it shows nothing."""
-    values, missing = fill(ecg.values)
-    if missing.mean() > 0.9 or len(values) < 4 * ecg.sampling_rate or np.ptp(values) == 0:
+def _lead(ecg: Signal) -> _Lead | None:
+    """The lead at about 125 Hz without pacing spikes, which thinning would widen into bumps; None where it shows nothing."""
+    cleaned, missing = clean_ecg(ecg)
+    if missing.mean() > 0.9 or len(ecg) < 4 * ecg.sampling_rate or np.ptp(cleaned.values) == 0:
         return None
-    thin = Thin.of(ecg, _EVERY_S)
-    coarse = thin.take(moving_mean(_without_spikes(values, ecg), thin.step))
-    rate = ecg.sampling_rate / thin.step
-    wander = moving_mean(moving_mean(coarse, round(0.9 * rate)), round(0.9 * rate))
-    return _Lead(lowpass(coarse - wander, rate, _LOWPASS_HZ), rate, ecg.start_s + thin.offset / ecg.sampling_rate)
-
-
-def _without_spikes(values: Floats, ecg: Signal) -> Floats:
-    """The ECG without pacing spikes, which thinning would widen into bumps.
-
-    A deflection that is over within four milliseconds, on either side of which the trace goes on as before, gives way to the median around
-    it. What is tall is told by the minute of the record, not by the block.
-    """
-    rate = ecg.sampling_rate
-    reach = max(1, round(_SPIKE_S * rate))
-    if rate < 240 or len(values) < 4 * reach:
-        return values
-    bend = np.zeros(len(values))
-    bend[reach:-reach] = np.abs(2 * values[reach:-reach] - values[: -2 * reach] - values[2 * reach :])
-    step = max(1, round(rate / 100))
-    sharp = []
-    for start_s, stop_s in grid(ecg.start_s, ecg.stop_s, GRID_S):
-        first, last = (int(np.clip(np.ceil(ecg.position(t) - 1e-6), 0, len(values))) for t in (start_s, stop_s))
-        offset = -round(ecg.start_s * rate + first) % step  # counted from the start of the record
-        some = values[first + offset : last : step]
-        if len(some):
-            low, high = np.percentile(some, [0.5, 99.5])
-            sharp.append(first + np.flatnonzero(bend[first:last] > 2 * _SPIKE * (high - low)))
-    at = np.concatenate(sharp) if sharp else np.empty(0, np.int64)
-    if not len(at):
-        return values
-    out = values.copy()
-    out[at] = np.median(cut(values, at - 2 * reach, 4 * reach + 1), axis=1)
-    return out
+    thin = thinned(cleaned)
+    rate = thin.sampling_rate
+    wander = moving_mean(moving_mean(thin.values, round(0.9 * rate)), round(0.9 * rate))
+    return _Lead(lowpass(thin.values - wander, rate, _LOWPASS_HZ), rate, thin.start_s)
 
 
 def _hat(rate: float) -> Floats:
@@ -201,13 +165,6 @@ def _hat(rate: float) -> Floats:
     bump = np.exp(-0.5 * (time / (0.25 * _P_WIDTH_S)) ** 2)
     bump -= bump.mean()
     return np.asarray(bump / np.linalg.norm(bump))
-
-
-def _uneven(r: Floats) -> NDArray[np.bool_]:
-    """Beats around which the intervals change from one to the next as they do in fibrillation."""
-    interval = np.diff(r, prepend=2 * r[0] - r[1])
-    change, usual = (ndimage.median_filter(x, _LOCAL, mode="nearest") for x in (np.abs(np.diff(interval, prepend=interval[0])), interval))
-    return np.asarray(change > _UNEVEN * usual)
 
 
 def _alike(normal: NDArray[np.bool_], near: NDArray[np.int64]) -> NDArray[np.int64]:
@@ -327,7 +284,7 @@ def _proven_bump(rows: Floats, pad: int, reach: int, *, most: int, least: float)
     for _, top, left, right, sign in sorted(bumps, reverse=True):
         step = np.sort(sign * rows[:, top] - np.maximum(sign * rows[:, left], sign * rows[:, right]))
         low, middle, high = (step[round(share * (len(step) - 1))] for share in (0.25, 0.5, 0.75))
-        if middle > _PROVEN * 1.2533 * (high - low) / 1.349 / len(rows) ** 0.5:  # the standard error of a median, by the normal law
+        if middle > _PROVEN * median_error(low, high, len(rows)):  # the standard error of a median, by the normal law
             return top
     return None
 
@@ -379,7 +336,7 @@ class _View:
 
 
 def _each(
-    view: _View, picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats, calm: float
+    view: _View, picture: _Picture, r: Floats, ragged: NDArray[np.bool_], alike: Floats, shown: Floats, calm: float
 ) -> tuple[NDArray, Floats, Floats]:
     """Each beat's own P: the place near the picture's where the beat looks most like it, and how much. `alike` are the R that the picture
     was sought among and `shown` their rows: they show whether P is still there. Rows rougher than `calm` deny no P."""
@@ -398,7 +355,7 @@ def _each(
     at = score.argmax(axis=1)
     of = np.arange(len(r))
     alike_p, amount = along[of, at] / norms[of, at], along[of, at] / size
-    still, gone = _nearby(picture, r, uneven, alike, shown)
+    still, gone = _nearby(picture, r, ragged, alike, shown)
     has = (alike_p > _ALIKE) & (amount > _SOME_P) & (amount < _MOST_P) & ~outside & still
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
     silent = ((noise > _TOO_LOUD) | (amount > _SOME_P) | (_roughness(rows) > calm)) & ~gone | outside | (not picture.whole)
@@ -409,7 +366,7 @@ def _each(
 
 
 def _nearby(
-    picture: _Picture, r: Floats, uneven: NDArray[np.bool_], alike: Floats, shown: Floats
+    picture: _Picture, r: Floats, ragged: NDArray[np.bool_], alike: Floats, shown: Floats
 ) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Whether the beats around each R still hold the picture's P at its place, and whether they surely do not.
 
@@ -425,11 +382,11 @@ def _nearby(
     amount, place = amount[known], alike[known]
     if len(amount) < _LOCAL or not picture.whole:
         return np.ones(len(r), dtype=bool), np.zeros(len(r), dtype=bool)
-    first = np.clip(_nearest(place, r) - _LOCAL // 2, 0, len(amount) - _LOCAL)
+    first = np.clip(nearest(place, r) - _LOCAL // 2, 0, len(amount) - _LOCAL)
     around = np.sort(amount[first[:, None] + np.arange(_LOCAL)], axis=1)
     low, middle, high = (around[:, round(share * (_LOCAL - 1))] for share in (0.25, 0.5, 0.75))
-    doubt = 1.2533 * (high - low) / 1.349 / _LOCAL**0.5
-    return (middle > _LOCAL_SHARE) & (~uneven | (low > 0.5 * _LOCAL_SHARE)), middle + _ONE_SIDED * doubt < _LOCAL_SHARE
+    doubt = median_error(low, high, _LOCAL)
+    return (middle > _LOCAL_SHARE) & (~ragged | (low > 0.5 * _LOCAL_SHARE)), middle + _ONE_SIDED * doubt < _LOCAL_SHARE
 
 
 def _without(view: _View, quiet: Floats) -> str:
@@ -503,7 +460,7 @@ def _march(rest: Floats, place: Floats, rate: float) -> tuple[NDArray[np.int64],
         if len(tops) < FEWEST:
             continue
         height = sign * seen[tops]
-        at_r = np.abs(place[_nearest(place, tops)] - tops) < min(_QRS_S * rate, _QRS_SHARE * float(np.median(np.diff(place))))
+        at_r = np.abs(place[nearest(place, tops)] - tops) < min(_QRS_S * rate, _QRS_SHARE * float(np.median(np.diff(place))))
         pace = _pace(sign * seen, rate)
         scale = np.percentile(height, 100 * (1 - min(0.5, 0.5 * len(rest) / rate / pace / len(tops))))
         weight = np.clip(height / scale, 0.0, 1.5) - 0.6 - 0.4 * at_r  # what is left of a QRS complex looks like anything
@@ -527,11 +484,6 @@ def _locked(tops: NDArray, place: Floats) -> float:
     before = np.clip(np.searchsorted(place, tops) - 1, 0, len(place) - 2)
     phase = (tops - place[before]) / (place[before + 1] - place[before])
     return float(np.abs(np.exp(2j * np.pi * phase).mean()))
-
-
-def _nearest(places: Floats, query: NDArray) -> NDArray[np.int64]:
-    right = np.clip(np.searchsorted(places, query), 1, len(places) - 1)
-    return np.where(query - places[right - 1] < places[right] - query, right - 1, right)
 
 
 def _pace(seen: Floats, rate: float) -> float:

@@ -15,7 +15,8 @@ from scipy import ndimage
 from caval import tables
 from caval.recording import Signal
 from caval.registry import stage
-from caval.stages._signal import cut, fill
+from caval.stages._signal import UNEVEN, cut
+from caval.stages.detect import clean_ecg
 from caval.vocabulary import RHYTHMS
 
 __all__ = ["rhythm"]
@@ -45,7 +46,7 @@ def rhythm(
     marks: pd.DataFrame,
     ecg: Signal | None = None,
     *,
-    irregular: float = 0.09,
+    irregular: float = UNEVEN,
     early: float = 0.80,
     fast_per_min: float = 100.0,
 ) -> pd.DataFrame:
@@ -58,9 +59,7 @@ def rhythm(
     ecg : Signal, optional
         For pacing spikes.
     irregular : float
-        Median difference of successive intervals over the median interval, from which intervals are irregular. In fibrillation successive
-        intervals differ by a quarter (Dash et al. 2009 take the root mean square of the differences over the mean interval with a
-        threshold of 0.1, from memory; the median forgives single early beats).
+        Median difference of successive intervals over the median interval, from which intervals are irregular; see `UNEVEN`.
     early : float
         Share of the usual interval below which a beat is early (common practice: a fifth and more).
     fast_per_min : float
@@ -147,15 +146,12 @@ def _majority(told: NDArray[np.int64], kinds: int) -> NDArray[np.int64]:
 
 
 def _spikes(ecg: Signal | None, r: Floats) -> NDArray[np.bool_]:
-    """Beats with a pacing spike before R: a deflection that is over within four milliseconds, which nothing in a heart is."""
-    none = np.zeros(len(r), dtype=bool)
-    if ecg is None or len(ecg) < ecg.sampling_rate or ecg.sampling_rate < 240:
-        return none
-    values, _ = fill(ecg.values)
+    """Beats with a pacing spike before R: what the detectors take out as too brief for a heart, tall beside the QRS complex."""
+    if ecg is None or len(ecg) < ecg.sampling_rate:
+        return np.zeros(len(r), dtype=bool)
+    cleaned, missing = clean_ecg(ecg)
+    spikes = np.where(missing, 0.0, np.abs(np.nan_to_num(ecg.values) - cleaned.values))
     before, length = round(0.25 * ecg.sampling_rate), round(0.35 * ecg.sampling_rate)
-    rows = cut(values, np.rint(ecg.position(r)).astype(int) - before, length)
-    height = np.ptp(rows, axis=1)
-    brief = np.abs(rows - ndimage.median_filter(rows, size=(1, 2 * max(2, round(0.004 * ecg.sampling_rate)) + 1)))
-    window = brief[:, : round(0.23 * ecg.sampling_rate)]
-    noise = np.median(brief, axis=1)
-    return np.asarray(window.max(axis=1) > np.maximum(_SPIKE * height, 12.0 * noise + 1e-12))
+    first = np.rint(ecg.position(r)).astype(int) - before
+    height = np.ptp(cut(cleaned.values, first, length), axis=1)
+    return np.asarray(cut(spikes, first, round(0.23 * ecg.sampling_rate)).max(axis=1) > np.maximum(_SPIKE * height, 1e-12))

@@ -20,7 +20,7 @@ from caval.recording import Signal
 from caval.registry import stage
 from caval.stages._confidence import confidence
 from caval.stages._picture import Picture, running_pictures
-from caval.stages._signal import fill, lowpass, moving_mean, refine
+from caval.stages._signal import fill, lowpass, moving_mean, nearest, refine, uneven
 from caval.stages._usable import usable_beats
 from caval.vocabulary import WAVES
 
@@ -51,8 +51,6 @@ _EARLY = 0.8
 """Share of the usual interval below which a beat is early: its P, if it has one, is not where it usually is."""
 _FEW_BEATS = 4
 """Beats either way that tell whether P and evenness are lost."""
-_UNEVEN = 0.09
-"""Median difference of successive intervals over the usual interval, from which they are uneven; see the rhythm stage."""
 _LATEST_CANNON_S = 0.25
 _INTO_NEXT_S = 0.12
 """How far past the next R v and y may stand: in a fast heart, through a line, they do."""
@@ -195,10 +193,7 @@ class _Extrema:
         """Time of the extremum nearest to each time, NaN for NaN."""
         if not len(self.time):
             return np.full(len(time), np.nan)
-        right = np.minimum(np.searchsorted(self.time, time), len(self.time) - 1)
-        left = np.maximum(right - 1, 0)
-        near = np.where(time - self.time[left] < self.time[right] - time, self.time[left], self.time[right])
-        return np.where(np.isfinite(time), near, np.nan)
+        return np.where(np.isfinite(time), self.time[nearest(self.time, time)], np.nan)
 
     def time_near(self, time: Floats) -> Floats:
         """Times of the extrema that lie at some times, as found on the other trace."""
@@ -371,10 +366,8 @@ class _Found:
         if coupling is None or not len(coupling):
             return lacking
         state = pd.Series(self.beat).map(coupling.set_index("beat")["p"]).to_numpy(object)
-        interval = np.diff(self.r, prepend=self.r[0])
-        uneven = ndimage.median_filter(np.abs(np.diff(interval, prepend=interval[0])), 2 * _FEW_BEATS + 1, mode="nearest")
         gone = ndimage.uniform_filter1d((state == "absent").astype(float), 2 * _FEW_BEATS + 1, mode="nearest") > 0.5
-        return lacking & ~(gone & (uneven > _UNEVEN * self.interval[self.which]))
+        return lacking & ~(gone & uneven(self.r, 2 * _FEW_BEATS + 1))
 
     def join(self, wave: str, more: _Hits) -> None:
         """Add marks to those of a wave; the last before R stands for the beat."""
