@@ -236,7 +236,7 @@ def calibrate(some: list[Case]) -> None:
         caught.append((wave, evidence))
         return np.where(~np.isnan(evidence).any(axis=1), np.arange(len(evidence)) / 1e6, -1.0)  # a number to know the row by
 
-    module = importlib.import_module("caval.stages.waves")
+    module = importlib.import_module("caval.stages._found")
     module.confidence = catch  # type: ignore[attr-defined]
     for case in some:
         caught.clear()
