@@ -90,6 +90,8 @@ def summary(result: Result, written: Sequence[Path]) -> str:
         f"beats     {len(beats)}, usable {int(beats['usable'].sum())}" + (f"  (not: {left_out})" if left_out else ""),
         f"marks     {len(marks)}" + (f"  {waves}" if waves else ""),
     ]
+    lines += [f"rhythm    {result.rhythm_text}"] if result.rhythm_text else []
+    lines += [f"delay     {result.delay_text}"] if result.delay_text else []
     if written:
         lines.append(f"files     {written[0].parent}/  " + "  ".join(path.name for path in written))
     return "\n".join(lines)

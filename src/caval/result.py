@@ -9,6 +9,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
 import pandas as pd
 
 import caval
@@ -101,6 +102,18 @@ class Result:
         others = {k: v for k, v in done.items() if k not in (*table, "candidates")}
         others |= {"atria": table["atria"]} if "atria" in done else {}
         return cls(recording, dict(roles), beats, table["marks"], table["spans"], others, run, warnings)
+
+    @property
+    def rhythm_text(self) -> str:
+        """How many beats each rhythm has, commonest first: ``sinus 372, fibrillation 90``; empty without rhythms."""
+        counts = self.beats["rhythm"].replace("", np.nan).value_counts()
+        return ", ".join(f"{word} {count}" for word, count in counts.items())
+
+    @property
+    def delay_text(self) -> str:
+        """The delay of the pressure channel, its doubt and what it rests on; empty where none was looked for."""
+        delay_s, sd_s = (self.run.get(name) for name in ("delay_s", "delay_sd_s"))
+        return "" if delay_s is None or sd_s is None else f"{1000 * delay_s:.0f} ms, SD {1000 * sd_s:.0f} ({self.run['delay_basis']})"
 
     @property
     def track(self) -> Track:

@@ -89,7 +89,7 @@ RHYTHMS: dict[str, RhythmTerm] = {
     for rhythm in (
         RhythmTerm("unknown", "", "neither intervals nor P nor a waves say"),
         RhythmTerm("sinus", "(N", "a P before each R"),
-        RhythmTerm("tachycardia", "(SVTA", "regular and fast, with a P before each R or none that T leaves to be seen"),
+        RhythmTerm("tachycardia", "(N", "regular and fast, with a P or an a before each R: a fast sinus rhythm, as far as one lead shows"),
         RhythmTerm("fibrillation", "(AFIB", "irregular, without P and without a"),
         RhythmTerm("dissociation", "(B3", "P waves at a pace of their own"),
         RhythmTerm("junctional", "(NOD", "regular, without P before R"),
@@ -97,7 +97,7 @@ RHYTHMS: dict[str, RhythmTerm] = {
         RhythmTerm("ectopic", "", "a single early beat within a rhythm"),
     )
 }
-"""Rhythms of a beat. ``(N``, ``(AFIB``, ``(NOD``, ``(P`` and ``(SVTA`` are rhythm strings of the MIT-BIH Arrhythmia Database; ``(B3`` is
+"""Rhythms of a beat. ``(N``, ``(AFIB``, ``(NOD`` and ``(P`` are rhythm strings of the MIT-BIH Arrhythmia Database; ``(B3`` is
 that of the European ST-T Database for complete block (from memory)."""
 
 

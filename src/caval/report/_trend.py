@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from caval.report import _ink
 from caval.report._beat import states_that_count
+from caval.tables import rhythm_stretches
 from caval.vocabulary import WAVES
 
 if TYPE_CHECKING:
@@ -58,6 +59,7 @@ def draw_trend(ax: Axes, result: Result, strip: tuple[float, float]) -> None:
         ax.fill_between(x, low, high, color=color, alpha=0.14, linewidth=0, zorder=2)
         ax.plot(x, middle, color=color, linewidth=1.8 if name == "mean" else 1.2, zorder=3.2 if name == "mean" else 3)
     _name_lines(ax, lines)
+    _draw_rhythms(ax, rhythm_stretches(result.beats), duration_s)
     middle_s, half_s = sum(strip) / 2, max(strip[1] - strip[0], duration_s / 200) / 2  # never too narrow to see
     ax.plot(
         [middle_s - half_s, middle_s + half_s], [0, 0], transform=ax.get_xaxis_transform(), color=_ink.INK, linewidth=4,
@@ -72,6 +74,19 @@ def draw_trend(ax: Axes, result: Result, strip: tuple[float, float]) -> None:
     ax.set_title(f"Trend: {what}", fontsize=9.5, color=_ink.INK, loc="left", pad=6)
     if not lines:
         ax.set_yticks([])
+
+
+def _draw_rhythms(ax: Axes, stretches: pd.DataFrame, duration_s: float) -> None:
+    """The word of each rhythm at the foot, from a dashed line where it begins; words that have no room are left out."""
+    per_s = ax.get_window_extent().width / duration_s
+    for k, row in enumerate(stretches.itertuples(index=False)):
+        if k:
+            ax.axvline(row.onset_s, color=_ink.SOFT, linewidth=0.8, linestyle=(0, (4, 3)), zorder=2.5)
+        if row.duration_s * per_s > 6.0 * len(row.rhythm) + 10:
+            ax.annotate(
+                row.rhythm, (row.onset_s, 0.0), xycoords=ax.get_xaxis_transform(), xytext=(4, 5), textcoords="offset points",
+                fontsize=_ink.MARGIN_NOTE, color=_ink.SOFT, zorder=5,
+            )
 
 
 def _lines(usable: pd.DataFrame, edges: NDArray) -> dict[str, NDArray[np.float64]]:

@@ -81,6 +81,11 @@ def _write_title(drawn: Figure, result: Result) -> None:
         f"{len(beats)} beats, {int(beats['usable'].sum())} usable",
         f"{len(marks)} marks" + (f"  ({waves})" if waves else ""),
     ]
+    start_s, stop_s = result.run.get("start_s"), result.run.get("stop_s")
+    if start_s or stop_s is not None:
+        parts.insert(1, f"analysed from {start_s or 0:g} s to {'the end' if stop_s is None else f'{stop_s:g} s'}")
+    if result.delay_text:
+        parts.append(f"delay {result.delay_text}")
     drawn.text(0.05, 0.972, result.recording.name, fontsize=15, fontweight="bold", color=_ink.INK, ha="left", va="top")
     drawn.text(0.05, 0.938, "   ·   ".join(parts), fontsize=10, color=_ink.INK, ha="left", va="top")
     if result.warnings:

@@ -90,8 +90,8 @@ def rhythm(
     is_irregular = uneven > irregular
     conducted = (share["coupled"] > 0.5) | (share["a"] > _BY_PRESSURE) & ~(share["apart"] > 0.5)
     no_p = ~conducted & ((share["absent"] > 0.5) | (np.isnan(share["coupled"]) & (share["a"] < 1 - _BY_PRESSURE)))
-    told[known & ~is_irregular & fast] = names.index("tachycardia")
-    told[known & conducted & ~fast] = names.index("sinus")
+    told[known & conducted] = names.index("sinus")
+    told[known & conducted & ~is_irregular & fast] = names.index("tachycardia")
     told[known & no_p & is_irregular] = names.index("fibrillation")
     told[known & no_p & ~is_irregular & ~fast] = names.index("junctional")
     told[known & (share["apart"] > 0.5)] = names.index("dissociation")
