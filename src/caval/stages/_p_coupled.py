@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 from scipy import signal
 
 from caval.stages._p_lead import FEWEST, P_WIDTH_S, Lead
-from caval.stages._signal import cut, median_error, nearest
+from caval.stages._signal import cut, median_error, nearest, refine_rows
 
 __all__ = ["LOCAL", "PPicture", "View", "calm_level", "each_beat", "roughness", "without_p"]
 
@@ -207,7 +207,7 @@ def each_beat(
     noise = np.sqrt(np.maximum(norms[of, at] ** 2 - along[of, at] ** 2, 0.0)) / size
     silent = ((noise > _TOO_LOUD) | (amount > _SOME_P) | (roughness(rows) > calm)) & ~gone | outside | (not picture.whole)
     state = np.where(has, "coupled", np.where(silent, "unknown", "absent")).astype(object)
-    onset = view.time(r, best + lags[at] + _parabola(score, at) + len(p) // 2) - picture.lead_s
+    onset = view.time(r, best + lags[at] + refine_rows(score, at) + len(p) // 2) - picture.lead_s
     sure = np.where(has, np.clip(alike_p, 0.0, 1.0), 1.0 - np.clip(noise / 2, 0.0, 0.9))
     return state, np.where(has, onset, np.nan), sure
 
@@ -246,16 +246,6 @@ def without_p(view: View, quiet: Floats) -> str:
     spread = ordered[round(0.75 * (len(step) - 1))] - ordered[round(0.25 * (len(step) - 1))]
     least = _PROVEN * 1.2533 * float(np.median(spread)) / 1.349 / len(quiet) ** 0.5
     return "absent" if least < _USUAL_P * view.qrs else "unknown"
-
-
-def _parabola(score: Floats, at: NDArray[np.int64]) -> Floats:
-    """Fraction of a step by which the top of each row lies off its largest sample."""
-    rows = np.arange(len(at))
-    middle = np.clip(at, 1, score.shape[1] - 2)
-    low, top, high = (score[rows, middle + d] for d in (-1, 0, 1))
-    bend = low - 2 * top + high
-    shift = np.where(bend < 0, 0.5 * (low - high) / np.where(bend == 0, 1, bend), 0.0)
-    return np.where(middle == at, np.clip(shift, -0.5, 0.5), 0.0)
 
 
 def calm_level(rows: Floats) -> float:

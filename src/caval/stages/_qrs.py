@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from caval.recording import Signal
-from caval.stages._signal import cut, moving_mean, refine
+from caval.stages._signal import cut, moving_mean, refine, refine_rows
 
 __all__ = ["Shapes", "forms", "own_place", "qrs_picture", "unit"]
 
@@ -61,15 +61,11 @@ class Shapes:
         likeness = match / self.norm
         best = likeness.argmax(axis=1)
         rows = np.arange(len(best))
-        inner = np.clip(best, 1, 2 * self.shift - 1)
-        before, here, after = likeness[rows, inner - 1], likeness[rows, inner], likeness[rows, inner + 1]
-        bend = before - 2 * here + after
-        step = np.where((bend < 0) & (inner == best), 0.5 * (before - after) / np.where(bend < 0, bend, -1.0), 0.0)
         top = likeness[rows, best]
         left = np.sqrt(np.maximum(1.0 - np.clip(top, 0.0, 1.0) ** 2, 0.0) / len(picture))
         slope = np.linalg.norm(np.gradient(picture))
         error = np.sqrt(_BAND_EXCESS) * left / (np.maximum(top, 0.05) * slope)
-        return best - self.shift + np.clip(step, -0.5, 0.5), top, np.hypot(error / self.rate, _FINEST_S)
+        return best - self.shift + refine_rows(likeness, best), top, np.hypot(error / self.rate, _FINEST_S)
 
     def laid(self, shift: Floats) -> Floats:
         """The picture's stretch of each at its (whole) shift, unit norm, shape (n, length)."""
@@ -153,11 +149,7 @@ def own_place(thin: Signal, energy: Floats, place: NDArray[np.int64]) -> tuple[F
     for _ in range(3):  # up to the top itself: nearness only chooses which
         step = _cut_rows(size, peak - 1, 3).argmax(axis=1) - 1
         peak = np.clip(peak + step, 0, 2 * half)
-    before, here, after = _cut_rows(size, peak - 1, 3).T
-    bend = before - 2 * here + after
-    inside = (bend < 0) & (peak > 0) & (peak < 2 * half)
-    step = np.where(inside, 0.5 * (before - after) / np.where(bend < 0, bend, -1.0), 0.0)
-    return middle - half + peak + np.clip(step, -0.5, 0.5), size[rows, peak]
+    return middle - half + peak + refine_rows(size, peak), size[rows, peak]
 
 
 def _cut_rows(values: Floats, starts: NDArray[np.int64], length: int) -> Floats:

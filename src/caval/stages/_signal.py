@@ -14,7 +14,8 @@ from caval.errors import InputError
 from caval.recording import Signal
 
 __all__ = [
-    "UNEVEN", "Thin", "bandpass", "cut", "fill", "grid", "lowpass", "median_error", "moving_mean", "nearest", "refine", "runs", "uneven",
+    "UNEVEN", "Thin", "bandpass", "cut", "fill", "grid", "lowpass", "median_error", "moving_mean", "nearest", "refine", "refine_rows",
+    "runs", "uneven",
 ]
 
 Floats = NDArray[np.float64]
@@ -77,6 +78,15 @@ def refine(values: Floats, index: NDArray[np.int64]) -> Floats:
     bend = before - 2 * here + after
     shift = np.where(bend != 0, 0.5 * (before - after) / np.where(bend == 0, 1, bend), 0.0)
     return index.astype(np.float64) + np.where(middle == index, np.clip(shift, -0.5, 0.5), 0.0)
+
+
+def refine_rows(values: Floats, at: NDArray[np.int64]) -> Floats:
+    """By how much of a step the top of each row lies off its largest value, at `at`; 0 at the ends and where nothing bends down."""
+    rows, middle = np.arange(len(at)), np.clip(at, 1, values.shape[1] - 2)
+    before, here, after = (values[rows, middle + step] for step in (-1, 0, 1))
+    bend = before - 2 * here + after
+    shift = np.where((bend < 0) & (middle == at), 0.5 * (before - after) / np.where(bend < 0, bend, -1.0), 0.0)
+    return np.clip(shift, -0.5, 0.5)
 
 
 def nearest(places: Floats, query: NDArray) -> NDArray[np.int64]:
